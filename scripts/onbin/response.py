@@ -29,14 +29,18 @@ def neighbour_noise(neighbours_uv: np.ndarray) -> Noise:
     Parameters
     ----------
     neighbours_uv : ndarray of complex, shape (n_windows, ..., n_bins)
-        Coefficients at the bins that hold noise only.
+        Coefficients at the bins that hold noise only; without any, the noise is not known (NaN).
     """
+    bins = neighbours_uv.shape[-1]
+    if bins == 0:
+        nothing = np.full(neighbours_uv.shape[1:-1], np.nan)
+        return Noise(nothing, nothing, nothing, 0)
     evoked = np.abs(neighbours_uv.mean(axis=0))
     return Noise(
         evoked_uv2=(evoked**2).mean(axis=-1),
         total_uv2=(np.abs(neighbours_uv) ** 2).mean(axis=(0, -1)),
         mean_amplitude_uv=evoked.mean(axis=-1),
-        bins=neighbours_uv.shape[-1],
+        bins=bins,
     )
 
 

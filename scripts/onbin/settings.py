@@ -50,11 +50,6 @@ class Dataset(Part):
     participants: list[str] = Field(
         [], description="Labels of the participants to take, without sub-; empty takes all."
     )
-    resting_tasks: list[str] = Field(
-        [],
-        description="Tasks whose recordings have no events: each recording is one trial of the "
-        "condition whose events are {task: LABEL}.",
-    )
 
 
 class Display(Part):
@@ -86,7 +81,9 @@ class Condition(Part):
     """A condition: which events belong to it and what flickers in it."""
 
     events: dict[str, str | int | float] = Field(
-        description="Column of events.tsv and the value that it must have; all of several.",
+        description="Column of events.tsv and the value that it must have; all of several. A BIDS "
+        "entity (task, ses, acq, run) may stand in place of a column; entities alone make each such "
+        "recording one trial.",
         min_length=1,
     )
     flickering: list[Label] = Field(
@@ -371,6 +368,37 @@ def json_schema() -> str:
     return json.dumps(schema | Settings.model_json_schema(), indent=2, ensure_ascii=False) + "\n"
 
 
+def part(settings: Settings, *names: str) -> dict[str, Any]:
+    """Pick parts of the settings for a rule, as plain values.
+
+    Parameters
+    ----------
+    settings : Settings
+    names : str
+        Such as ``filter``, ``alpha.segment_s`` or ``conditions.*.flickering``, where ``*`` stands
+        for every name; and ``terms`` for all that makes up the terms.
+    """
+    whole = plain(settings)
+    whole["terms"] = {
+        "tags": [[name, str(frequency)] for name, frequency in settings.tag_frequencies.items()],
+        "harmonics": settings.response.harmonics,
+        "intermodulation_order": settings.response.intermodulation_order,
+    }
+    picked: dict[str, Any] = {}
+    for name in names:
+        _pick(whole, name.split("."), picked)
+    return plain(picked)
+
+
+def _pick(whole: Mapping, path: list[str], picked: dict) -> None:
+    first, *rest = path
+    for key in whole if first == "*" else [first]:
+        if rest:
+            _pick(whole[key], rest, picked.setdefault(key, {}))
+        else:
+            picked[key] = whole[key]
+
+
 def plain(value: Any) -> Any:
     """Turn settings into plain values with sorted keys, as rules hand them to scripts.
 
@@ -383,8 +411,6 @@ def plain(value: Any) -> Any:
         return {key: plain(value[key]) for key in sorted(value)}
     if isinstance(value, list | tuple):
         return [plain(item) for item in value]
-    if isinstance(value, Fraction):
-        return str(value)
     return value
 
 

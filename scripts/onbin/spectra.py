@@ -152,3 +152,48 @@ def power_spectral_density(
         detrend="linear",
         scaling="density",
     )
+
+
+def cut(signal_uv: np.ndarray, starts: np.ndarray, n_samples: int) -> np.ndarray:
+    """Cut windows of one length from a continuous signal, shape (n_windows, n_sites, n_samples)."""
+    return np.stack([signal_uv[:, start : start + n_samples] for start in starts])
+
+
+def bin_coefficients(
+    signal_uv: np.ndarray,
+    starts: np.ndarray,
+    offsets_s: np.ndarray,
+    rate_hz: float,
+    frequencies_hz: np.ndarray,
+    samples: np.ndarray,
+    bins: np.ndarray,
+) -> np.ndarray:
+    """Coefficients at each term and at bins beside it, referred to the onset of the flicker.
+
+    Parameters
+    ----------
+    signal_uv : ndarray, shape (n_sites, n_times)
+    starts : ndarray of int, shape (n_windows,)
+        First sample of each window.
+    offsets_s : ndarray, shape (n_windows,)
+        Time from onset to that sample.
+    rate_hz : float
+    frequencies_hz : ndarray, shape (n_terms,)
+    samples : ndarray of int, shape (n_terms,)
+        Length of the window of each term; a bin is rate_hz / samples wide.
+    bins : ndarray of int, shape (n_bins,)
+        Offsets from the term, in bins; 0 is the term.
+
+    Returns
+    -------
+    coefficients_uv : ndarray of complex, shape (n_windows, n_sites, n_terms, n_bins)
+    """
+    shape = (len(starts), len(signal_uv), len(frequencies_hz), len(bins))
+    coefficients_uv = np.empty(shape, dtype=complex)
+    for n_samples in np.unique(samples):
+        chosen = np.flatnonzero(samples == n_samples)
+        grid_hz = frequencies_hz[chosen, None] + bins * rate_hz / n_samples
+        windows_uv = cut(signal_uv, starts, n_samples)
+        flat = to_onset(project(windows_uv, rate_hz, grid_hz.ravel()), grid_hz.ravel(), offsets_s)
+        coefficients_uv[:, :, chosen] = flat.reshape(*shape[:2], *grid_hz.shape)
+    return coefficients_uv

@@ -106,12 +106,30 @@ def _sum_label(*parts: tuple[int, str]) -> str:
     return "".join(signed).removeprefix("+")
 
 
-def study_terms(
-    tags: Mapping[str, Fraction], harmonic_count: int, order: int, below_hz: float
-) -> list[Term]:
-    """All terms of a study below a frequency (the low-pass edge or what the rate allows)."""
-    terms = harmonics(tags, harmonic_count) + intermodulations(tags, order)
+def study_terms(settings: Mapping, below_hz: float) -> list[Term]:
+    """All terms of a study below a frequency.
+
+    Parameters
+    ----------
+    settings : mapping
+        ``tags`` (pairs of name and frequency, as ratio), ``harmonics``, ``intermodulation_order``.
+    below_hz : float
+        What the filters let pass, see `passband_end`.
+    """
+    tags = study_tags(settings)
+    terms = harmonics(tags, settings["harmonics"])
+    terms += intermodulations(tags, settings["intermodulation_order"])
     return [term for term in terms if term.frequency < below_hz]
+
+
+def study_tags(settings: Mapping) -> dict[str, Fraction]:
+    """Exact frequencies of the tags, from the plain settings of a rule."""
+    return {name: Fraction(ratio) for name, ratio in settings["tags"]}
+
+
+def passband_end(lowpass_hz: float | None, rate_hz: float) -> float:
+    """Edge of the low-pass in Hz: as set, else 0.45 of the sampling rate, at most 100."""
+    return lowpass_hz or min(100.0, 0.45 * rate_hz)
 
 
 def whole_cycle_samples(frequencies: Iterable[Fraction], rate: Fraction) -> int:

@@ -1,0 +1,91 @@
+# The settings, the recordings, and how rules name files, settings and code.
+
+import os
+import sys
+import time
+from pathlib import Path
+
+from snakemake.exceptions import WorkflowError
+
+sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
+
+from onbin import layout, summary
+from onbin.errors import OnbinError
+from onbin.fingerprint import fingerprint
+from onbin.settings import load_settings, part
+
+os.environ.setdefault("OMP_NUM_THREADS", "1")  # jobs run side by side; results do not depend on it
+STARTED_S = time.time()
+
+try:
+    STUDY = load_settings(
+        [*workflow.configfiles, Path(workflow.basedir) / "config" / "config.yaml"][0],
+        workflow.config_settings.config,
+    )
+    RECORDINGS = layout.find_recordings(
+        STUDY.dataset.folder, STUDY.dataset.tasks, STUDY.dataset.participants
+    )
+except OnbinError as error:
+    sys.exit(f"\n{error}\n")
+
+RESULTS = STUDY.dataset.results
+RECORDING = {recording.name: recording for recording in RECORDINGS}
+PARTICIPANTS = sorted({recording.participant for recording in RECORDINGS})
+
+
+wildcard_constraints:
+    recording=layout.RECORDING_PATTERN,
+    participant=layout.PARTICIPANT_PATTERN,
+
+
+def result(name):
+    """Path of a file of the results, with its wildcards."""
+    return layout.result(RESULTS, name)
+
+
+def made(step, *names):
+    """Outputs of a step by name, and their sidecars."""
+    paths = {name: result(f"{step}_{name}") for name in names}
+    return paths | {"sidecars": [layout.sidecar(path) for path in paths.values()]}
+
+
+def of_participant(name):
+    """Input function: a file of each of a participant's recordings."""
+    return lambda wildcards: [
+        result(name).format(recording=recording)
+        for recording in recordings_of(wildcards.participant)
+    ]
+
+
+def recordings_of(participant):
+    return [r.name for r in RECORDINGS if r.participant == participant]
+
+
+def of_all_recordings(name):
+    return [result(name).format(recording=recording.name) for recording in RECORDINGS]
+
+
+def of_all_participants(name):
+    return [result(name).format(participant=participant) for participant in PARTICIPANTS]
+
+
+def settings_part(*names, **others):
+    """A rule's own part of the settings."""
+    return part(STUDY, *names) | others
+
+
+def code(step):
+    """What code a step rests on."""
+    return fingerprint(Path(workflow.basedir) / "scripts" / f"{step}.py")
+
+
+def log_of(step, scope="study"):
+    return layout.log(RESULTS, step, scope)
+
+
+def benchmark_of(step, scope="study"):
+    return layout.benchmark(RESULTS, step, scope)
+
+
+def closing_summary():
+    return summary.closing(RESULTS, time.time() - STARTED_S)

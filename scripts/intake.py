@@ -1,0 +1,35 @@
+"""Read a raw BIDS recording: EEG with positions, trials in the study's terms, working rate."""
+
+from onbin import dataset, filtering, layout, tables, tagging
+from onbin.runner import run
+
+
+def intake(inputs, outputs, settings):
+    recording = settings["recording"]
+    raw = dataset.read_recording(settings["folder"], recording, settings["extension"])
+    channels = dataset.choose_channels(raw)
+    rate = tagging.exact_rate(raw.info["sfreq"])
+    factor = max(1, int(rate / tagging.exact(settings["intake"]["working_rate_hz"])))
+
+    data_uv = filtering.decimate(
+        lambda start, stop: raw.get_data(start=start, stop=stop) * 1e6,
+        raw.n_times,
+        float(rate),
+        factor,
+    )
+    dataset.check_scale(data_uv, raw)
+    working = dataset.with_data(raw, data_uv, float(rate / factor))
+    trials = dataset.read_trials(
+        dataset.events_file(inputs.files),
+        settings["conditions"],
+        layout.entities(recording),
+        raw.n_times / float(rate),
+    )
+
+    dataset.write_signal(working, outputs.signal)
+    tables.write_table(outputs.trials, trials, ["trial", "condition", "onset_s", "duration_s"])
+    tables.write_table(outputs.channels, channels, ["name", "type", "units", "status", "position"])
+
+
+if "snakemake" in globals():
+    run(intake, snakemake)  # noqa: F821

@@ -1,0 +1,237 @@
+"""The data dictionary: every column of every table, once, with unit, meaning, null and source."""
+
+from dataclasses import dataclass
+from typing import Literal
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column.
+
+    Attributes
+    ----------
+    description : str
+        What it holds, with its formula.
+    unit : str
+        Empty for words, counts and ratios.
+    kind : {"number", "integer", "text", "boolean"}
+    null : str
+        How it is distributed, or what its mean is, where there is no response.
+    source : str
+        Publication.
+    """
+
+    description: str
+    unit: str = ""
+    kind: Literal["number", "integer", "text", "boolean"] = "number"
+    null: str = ""
+    source: str = ""
+
+
+def _text(description: str) -> Column:
+    return Column(description, kind="text")
+
+
+def _count(description: str) -> Column:
+    return Column(description, kind="integer")
+
+
+VICTOR_MAST = "Victor & Mast 1991, Electroencephalogr Clin Neurophysiol 78:378"
+MEIGEN_BACH = "Meigen & Bach 2000, Doc Ophthalmol 98:207"
+CORCORAN = "Corcoran et al. 2018, Psychophysiology 55:e13064"
+DONOGHUE = "Donoghue et al. 2020, Nat Neurosci 23:1655"
+BAKDASH = "Bakdash & Marusich 2017, Front Psychol 8:456"
+
+COLUMNS = {
+    # who, what and where
+    "participant": _text("Participant, with sub-."),
+    "recording": _text("Recording: path below the dataset without _eeg and extension."),
+    "condition": _text("Condition, as named in the settings."),
+    "tag": _text("Tag, or tags joined by + for an intermodulation."),
+    "term": _text("1f, 2f, ...: harmonics of the tag; f1+f2 and the like: intermodulations."),
+    "frequency_hz": Column("Exact frequency of the term, to the precision printed.", "Hz"),
+    "driven": Column("Whether every tag of the term flickers in the condition.", kind="boolean"),
+    "site": _text("Channel, or region as named in the settings."),
+    "site_kind": _text("channel, or region (the mean signal of its channels)."),
+    "channels": _text("Channels of the region that the recording has."),
+    "in_study": Column("Whether the participant's figures enter the study's.", kind="boolean"),
+    # trials and windows
+    "trial": _count("Number of the trial in the recording, from 1."),
+    "window": _count("Number of the window in the recording, from 1."),
+    "index_in_trial": _count("Number of the window in its trial, from 1."),
+    "onset_s": Column("Onset of the trial from the start of the recording.", "s"),
+    "duration_s": Column("Duration of the trial.", "s"),
+    "start_sample": _count("First sample of the window, at the working rate."),
+    "n_samples": _count("Samples of the window."),
+    "offset_s": Column("Time from the trial's onset to the window's first sample.", "s"),
+    "window_number": _count("Place of the window in the participant's session, from 1."),
+    "windows": _count("Windows that the figure rests on."),
+    "windows_placed": _count("Windows that the trials hold."),
+    "windows_kept": _count("Windows that were kept."),
+    # verdicts
+    "verdict": _text("good, bad, kept, removed or left out."),
+    "reason": _text("Why; n/a where there is nothing to say."),
+    # channels and components
+    "name": _text("Channel."),
+    "type": _text("Type of the channel, in the words of BIDS."),
+    "units": _text("Unit of the channel's signal."),
+    "status": _text("good or bad, as the dataset says."),
+    "position": _text("Where the channel's position comes from: dataset, template or none."),
+    "component": _count("Number of the independent component, from 0."),
+    "component_class": _text("Most probable class by ICLabel."),
+    "probability": Column(
+        "Probability of that class.", source="Pion-Tonachini et al. 2019, NeuroImage 198:181"
+    ),
+    "variance_share": Column("Share of the signal's variance that runs through the component."),
+    "tag_share": Column("Largest share of a driven term's power that runs through it."),
+    "tag_share_term": _text("The term of that share."),
+    # filters
+    "gain": Column("Measured gain of the filters at the term: 1 leaves it as it is."),
+    "passed": Column("Whether the gain is within the allowed tolerance of 1.", kind="boolean"),
+    "topography_correlation": Column(
+        "Correlation of the term's topography before and after the cleaning."
+    ),
+    # response
+    "harmonics": _text(
+        "Harmonics that the sum holds; those shared with another term are left out."
+    ),
+    "neighbours": _count("Neighbouring bins B that the noise rests on."),
+    "amplitude_uv": Column(
+        "Evoked (phase-locked) amplitude |X̄|, X̄ the mean of the windows' coefficients.",
+        "µV",
+        null="Rayleigh, mean sqrt(π/4 · noise)",
+    ),
+    "amplitude_low_uv": Column(
+        "Lower end of the 95 % confidence interval of the evoked amplitude (Rice).", "µV"
+    ),
+    "amplitude_high_uv": Column("Upper end of that interval.", "µV"),
+    "noise_uv2": Column("Mean of |X̄|² over the neighbouring bins.", "µV²", source=MEIGEN_BACH),
+    "amplitude_corrected_uv": Column("sqrt(max(|X̄|² − noise, 0)).", "µV"),
+    "amplitude_baseline_uv": Column(
+        "|X̄| less the mean of |X̄| over the neighbouring bins.", "µV", null="mean 0"
+    ),
+    "amplitude_sum_uv": Column(
+        "Sum of amplitude_baseline_uv over the harmonics named in harmonics.",
+        "µV",
+        null="mean 0",
+        source="Retter, Rossion & Schiltz 2021, J Cogn Neurosci 33:2372",
+    ),
+    "total_power_uv2": Column("Mean of |X_k|² over windows.", "µV²"),
+    "total_noise_uv2": Column("Mean of |X_k|² over windows and neighbouring bins.", "µV²"),
+    "window_amplitude_uv": Column("Mean over windows of the single-window amplitude |X_k|.", "µV"),
+    "projected_amplitude_uv": Column(
+        "Amplitude of the window along the mean phase of the condition's other windows; in tables "
+        "of measures the mean over windows.",
+        "µV",
+        null="mean 0",
+    ),
+    "snr": Column(
+        "|X̄|² / noise as a power ratio; of total power where the flicker is not phase-locked.",
+        null="F(2, 2B), mean B/(B − 1); for total power F(2K, 2KB)",
+        source=MEIGEN_BACH,
+    ),
+    "snr_db": Column("10·log10(snr).", "dB"),
+    "snr_p": Column("p of the SNR by its F distribution.", null="uniform"),
+    "amplitude_ratio": Column(
+        "|X̄| over the mean amplitude of the neighbouring bins; a description, not a test."
+    ),
+    "t2circ": Column("T²circ against zero.", null="K·T²circ ~ F(2, 2K − 2)", source=VICTOR_MAST),
+    "t2circ_p": Column("p of T²circ.", null="uniform", source=VICTOR_MAST),
+    "hotelling_t2": Column(
+        "Hotelling's T² against zero.", null="(K − 2)/(2(K − 1))·T² ~ F(2, K − 2)"
+    ),
+    "hotelling_p": Column("p of Hotelling's T².", null="uniform"),
+    "condition_index": Column(
+        "Ratio of the axes of the windows' scatter; 1 is circular.", source="Baker 2021"
+    ),
+    "condition_index_p": Column("p of circular scatter.", null="uniform", source="Baker 2021"),
+    "detection_test": _text(
+        "Test that detection rests on: t2circ, hotelling where scatter is not circular (5 %), "
+        "total_snr where the flicker is not phase-locked."
+    ),
+    "detection_p": Column("p of that test.", null="uniform"),
+    "detection_p_corrected": Column(
+        "detection_p corrected over the channels of the term and condition; of a region the same "
+        "as detection_p, since the region is the primary test."
+    ),
+    "present": Column("Whether the corrected p is at most the level set.", kind="boolean"),
+    "disc_radius_uv": Column("Radius of the 95 % confidence disc of X̄.", "µV", source=VICTOR_MAST),
+    "phase_rad": Column(
+        "Phase of X̄ from the onset of the flicker; 0 is a cosine peak at onset.",
+        "rad",
+        null="uniform",
+    ),
+    "phase_half_width_rad": Column(
+        "Half-width of the 95 % interval of the phase; π where no phase is excluded.", "rad"
+    ),
+    "itpc": Column("Inter-trial phase coherence over windows.", null="E[ITPC²] = 1/K"),
+    "ppc": Column("Pairwise phase consistency (K·ITPC² − 1)/(K − 1).", null="mean 0"),
+    "rayleigh_z": Column("Rayleigh's z = K·ITPC².", source="Zar 2010, chapter 27"),
+    "rayleigh_p": Column("p of Rayleigh's test (Zar's approximation).", null="uniform"),
+    # alpha
+    "alpha_frequency_hz": Column(
+        "Individual alpha frequency: the peak; n/a where none was found.", "Hz", source=CORCORAN
+    ),
+    "alpha_centre_hz": Column("Centre of gravity of the alpha peak.", "Hz", source=CORCORAN),
+    "alpha_found": _text("Whether an individual alpha frequency was found, and if not why."),
+    "band_low_hz": Column("Lower edge of the individual alpha band.", "Hz"),
+    "band_high_hz": Column("Upper edge of the individual alpha band.", "Hz"),
+    "alpha_power_uv2": Column("Power in the individual band (the fixed one if none).", "µV²"),
+    "alpha_power_db": Column("10·log10(alpha_power_uv2 / 1 µV²).", "dB"),
+    "alpha_fixed_uv2": Column("Power in the fixed alpha band.", "µV²"),
+    "alpha_periodic_uv2": Column(
+        "Power in the individual band above the aperiodic fit.", "µV²", source=DONOGHUE
+    ),
+    "alpha_relative": Column("Power in the individual band as a share of that in 2-40 Hz."),
+    "alpha_lateralisation": Column(
+        "(R − L)/(R + L) of alpha power in the two regions set; n/a for other sites."
+    ),
+    "aperiodic_exponent": Column("Exponent of the aperiodic fit, 2-40 Hz.", source=DONOGHUE),
+    "aperiodic_offset": Column("Offset of the aperiodic fit.", "log10(µV²/Hz)", source=DONOGHUE),
+    "aperiodic_r2": Column("Variance of the log spectrum that the fit explains."),
+    "subtracted_uv2": Column(
+        "Power of the terms in 5-15 Hz that were subtracted before alpha was measured.", "µV²"
+    ),
+    # relation
+    "log_alpha": Column("log10 of the window's alpha power in µV².", "log10(µV²)"),
+    "rho": Column(
+        "Spearman correlation over windows of log_alpha with projected_amplitude_uv, both less "
+        "their condition's mean.",
+        null="mean 0",
+    ),
+    "rho_partial": Column("The same with the window's number (time on task) held constant."),
+    "rho_p": Column("p by permuting windows within conditions.", null="uniform"),
+    "attended": Column("Whether the tag is the attended one.", kind="boolean"),
+    "rho_mean": Column("Mean over people of rho, by Fisher's z."),
+    "rho_low": Column("Lower end of its 95 % BCa bootstrap interval."),
+    "rho_high": Column("Upper end of that interval."),
+    "rm_r": Column("Repeated-measures correlation over all windows.", source=BAKDASH),
+    "rm_p": Column("p of the repeated-measures correlation.", source=BAKDASH),
+    # study
+    "measure": _text("Column that is compared."),
+    "comparison": _text("Comparison, as named in the settings."),
+    "kind": _text("within people, between groups, or correlation with a covariate."),
+    "plus": _text("What is compared."),
+    "minus": _text("What it is compared with."),
+    "n": _count("People in the comparison."),
+    "who": _text("People in the comparison."),
+    "estimate": Column("Mean difference, in the unit of the measure; or Spearman's rho."),
+    "estimate_unit": _text("Unit of the estimate."),
+    "estimate_low": Column("Lower end of its 95 % BCa bootstrap interval."),
+    "estimate_high": Column("Upper end of that interval."),
+    "effect_size": Column("d_z within people, Hedges' g between groups."),
+    "p": Column("p by flipping signs, or by permuting people.", null="uniform"),
+    "p_holm": Column("p after Holm's correction over the planned comparisons."),
+    "recordings": _count("Recordings of the participant."),
+    "channels_bad": _count("Bad channels, the most in one recording."),
+    "channels_total": _count("EEG channels, the fewest in one recording."),
+    "components_removed": _count("Independent components removed, over recordings."),
+    "fewest_windows": _count("Windows kept in the condition that kept fewest."),
+    "fewest_condition": _text("That condition."),
+    # manifest
+    "file": _text("File, from the results folder."),
+    "step": _text("Step that made it."),
+    "bytes": _count("Size."),
+    "sha256": _text("SHA-256 of its content."),
+    "inputs": _text("Files that it was made from."),
+}

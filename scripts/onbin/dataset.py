@@ -1,0 +1,320 @@
+"""The edge to a BIDS dataset: recordings into mne's Raw, events into trials of the study."""
+
+import logging
+import math
+import warnings
+from collections.abc import Iterable, Mapping, Sequence
+from fractions import Fraction
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from onbin import layout, tagging
+from onbin.errors import DataError
+from onbin.tables import MISSING, read_foreign
+
+log = logging.getLogger("onbin")
+
+TEMPLATE_MONTAGE = "colin27_1005"
+AUXILIARY_TYPES = ("eog", "ecg")
+EEG_SCALE_UV = (0.01, 100_000.0)  # what a channel's spread can be, whatever the amplifier
+
+
+def read_recording(folder: str | Path, name: str, extension: str):
+    """Open a recording as mne's Raw, without reading its samples.
+
+    Types, units and bad channels come from channels.tsv, positions from electrodes.tsv.
+
+    Parameters
+    ----------
+    folder : path
+        Root of the dataset.
+    name : str
+        As in `layout.Recording`.
+    extension : str
+
+    Raises
+    ------
+    DataError
+        If the files cannot be read.
+    """
+    import mne_bids
+
+    labels = layout.entities(name)
+    path = mne_bids.BIDSPath(
+        root=folder,
+        subject=labels["sub"],
+        session=labels.get("ses"),
+        task=labels.get("task"),
+        acquisition=labels.get("acq"),
+        run=labels.get("run"),
+        suffix="eeg",
+        datatype="eeg",
+        extension=extension,
+    )
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")
+            return mne_bids.read_raw_bids(path, verbose="error")
+    except Exception as error:  # readers raise whatever a damaged file leads them to
+        first_line = next(iter(str(error).splitlines()), type(error).__name__)
+        raise DataError(
+            f"{path.fpath} cannot be read ({first_line}). Check that the file is complete, or "
+            "leave the recording out."
+        ) from error
+
+
+def choose_channels(raw) -> list[dict[str, Any]]:
+    """Keep EEG channels and those that record eyes and heart; see that EEG has positions.
+
+    Changes ``raw``. Where the dataset gives no positions they are those of the template by the
+    10-05 names.
+
+    Returns
+    -------
+    list of dict
+        Rows of the table of channels.
+    """
+    import mne
+
+    kinds = dict(zip(raw.ch_names, raw.get_channel_types(), strict=True))
+    if "eeg" not in kinds.values():
+        raise DataError(
+            f"no channel is EEG; the types are {', '.join(sorted(set(kinds.values())))}. Set type "
+            "EEG in channels.tsv."
+        )
+    raw.pick([name for name, kind in kinds.items() if kind in ("eeg", *AUXILIARY_TYPES)])
+    eeg = [name for name in raw.ch_names if kinds[name] == "eeg"]
+    given = _positions(raw)
+    source = "dataset"
+    if not given:
+        source = "template"
+        montage = mne.channels.make_standard_montage(TEMPLATE_MONTAGE)
+        raw.set_montage(montage, match_case=False, on_missing="ignore", verbose="error")
+        given = _positions(raw)
+    without = [name for name in eeg if name not in given]
+    if without:
+        log.warning("no position for %s: they cannot be interpolated", ", ".join(without))
+    return [
+        {
+            "name": name,
+            "type": kinds[name].upper(),
+            "units": "V",
+            "status": "bad" if name in raw.info["bads"] else "good",
+            "position": source if name in given else "none",
+        }
+        for name in raw.ch_names
+    ]
+
+
+def _positions(raw) -> set[str]:
+    """Names of EEG channels with a usable position."""
+    return {
+        channel["ch_name"]
+        for channel in raw.info["chs"]
+        if np.all(np.isfinite(channel["loc"][:3])) and np.any(channel["loc"][:3])
+    }
+
+
+def read_trials(
+    events: str | Path | None,
+    conditions: Mapping[str, Mapping[str, Any]],
+    entities: Mapping[str, str],
+    recording_s: float,
+) -> list[dict[str, Any]]:
+    """Find the trials of a recording.
+
+    Parameters
+    ----------
+    events : path, optional
+        Its events.tsv.
+    conditions : mapping
+        By name: ``events`` (column or entity, and value) and ``duration_s`` (or None).
+    entities : mapping
+        BIDS entities of the recording.
+    recording_s : float
+        Length of the recording.
+
+    Returns
+    -------
+    list of dict
+        ``trial``, ``condition``, ``onset_s``, ``duration_s``, in the order of onsets.
+
+    Raises
+    ------
+    DataError
+        If no event belongs to a condition, or one cannot be understood.
+    """
+    rows = read_foreign(events) if events else []
+    trials = []
+    for name, condition in conditions.items():
+        wanted = condition["events"]
+        columns = {key: value for key, value in wanted.items() if key not in layout.ENTITIES}
+        labels = {key: value for key, value in wanted.items() if key in layout.ENTITIES}
+        if not all(_same(entities.get(key), value) for key, value in labels.items()):
+            continue
+        if not columns:
+            trials.append({"condition": name, "onset_s": 0.0, "duration_s": recording_s})
+        for number, row in enumerate(rows, start=2):
+            if columns and all(_same(row.get(key), value) for key, value in columns.items()):
+                onset_s = _seconds(events, number, "onset", row)
+                duration_s = _seconds(events, number, "duration", row) or condition["duration_s"]
+                if not duration_s:
+                    raise DataError(
+                        f"{events}, line {number}: no duration; give conditions.{name}.duration_s."
+                    )
+                trials.append({"condition": name, "onset_s": onset_s, "duration_s": duration_s})
+    if not trials:
+        raise DataError(_nothing_found(events, rows, conditions))
+    trials.sort(key=lambda trial: trial["onset_s"])
+    return [{"trial": number, **trial} for number, trial in enumerate(trials, start=1)]
+
+
+def _same(found: str | None, wanted: str | int | float) -> bool:
+    if found is None or found == MISSING:
+        return False
+    if found == str(wanted):
+        return True
+    try:
+        return float(found) == float(wanted)
+    except ValueError:
+        return False
+
+
+def _seconds(events: str | Path | None, number: int, column: str, row: Mapping[str, str]) -> float:
+    text = row.get(column)
+    if text is None:
+        raise DataError(f"{events} has no column {column}; BIDS requires it.")
+    if text == MISSING and column == "duration":
+        return 0.0
+    try:
+        value = float(text)
+    except ValueError:
+        value = math.nan
+    if not math.isfinite(value) or (column == "duration" and value < 0):
+        raise DataError(
+            f"{events}, line {number}: {column} is {text!r}, expected a number of seconds."
+        )
+    return value
+
+
+def _nothing_found(
+    events: str | Path | None, rows: Sequence[Mapping[str, str]], conditions: Mapping[str, Mapping]
+) -> str:
+    if not events:
+        return "the recording has no events.tsv, and no condition takes whole recordings."
+    columns = sorted({key for c in conditions.values() for key in c["events"]})
+    there = []
+    for column in columns:
+        values = sorted({row[column] for row in rows if column in row})
+        if values:
+            there.append(f"{column}: {', '.join(values[:12])}{' ...' if len(values) > 12 else ''}")
+    found = "; ".join(there) or (
+        f"columns {', '.join(rows[0])}" if rows else "no rows"
+    )
+    return f"{events} has no event of any condition. It has {found}. Compare with conditions."
+
+
+def events_file(files: Iterable[str]) -> str | None:
+    """Choose the events.tsv that is nearest to the recording."""
+    candidates = [path for path in files if path.endswith("events.tsv")]
+    return max(candidates, key=len, default=None)
+
+
+def read_signal(path: str | Path):
+    """Read a signal of ours as mne's Raw, in memory."""
+    import mne
+
+    return mne.io.read_raw_fif(path, preload=True, verbose="error")
+
+
+def write_signal(raw, path: str | Path) -> None:
+    """Write a signal in single precision."""
+    raw.save(path, fmt="single", overwrite=True, verbose="error")
+
+
+def eeg_uv(raw) -> np.ndarray:
+    """EEG of a Raw in µV, shape (n_channels, n_times)."""
+    return raw.get_data(picks="eeg") * 1e6
+
+
+def eeg_names(raw) -> list[str]:
+    """Names of the EEG channels, bad ones too."""
+    kinds = zip(raw.ch_names, raw.get_channel_types(), strict=True)
+    return [name for name, kind in kinds if kind == "eeg"]
+
+
+def with_data(raw, data_uv: np.ndarray, rate_hz: float):
+    """Put decimated samples in the place of a recording's own; all else is kept.
+
+    Parameters
+    ----------
+    raw : mne.io.Raw
+    data_uv : ndarray, shape (n_channels, n_times)
+    rate_hz : float
+    """
+    import mne
+
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # of a low-pass above the new Nyquist: it has been applied
+        info = raw.info.copy()
+        with info._unlock():
+            info["sfreq"] = rate_hz
+            info["lowpass"] = min(info["lowpass"] or rate_hz / 2, rate_hz / 2)
+        working = mne.io.RawArray(data_uv * 1e-6, info, verbose="error")
+        working.set_annotations(_relative(raw.annotations), verbose="error")
+    return working
+
+
+def _relative(annotations):
+    """Annotations that speak of bad stretches, without a date, so that results carry none."""
+    import mne
+
+    bad = [a for a in annotations if a["description"].lower().startswith("bad")]
+    return mne.Annotations(
+        [a["onset"] for a in bad], [a["duration"] for a in bad], [a["description"] for a in bad]
+    )
+
+
+def check_scale(data_uv: np.ndarray, raw) -> None:
+    """See that the samples are numbers and of the size of EEG.
+
+    Raises
+    ------
+    DataError
+        If samples are not finite, or the units must be wrong by orders of magnitude.
+    """
+    if not np.isfinite(data_uv).all():
+        names = [raw.ch_names[i] for i in np.flatnonzero(~np.isfinite(data_uv).all(axis=1))]
+        raise DataError(
+            f"{', '.join(names)}: some samples are not finite numbers. Export the recording anew, "
+            "or leave it out."
+        )
+    low, high = EEG_SCALE_UV
+    eeg = [kind == "eeg" for kind in raw.get_channel_types()]
+    spread = float(np.median(np.std(data_uv[eeg], axis=1)))
+    if not low <= spread <= high:
+        raise DataError(
+            f"the median channel varies by {spread:.3g} µV (standard deviation), expected {low} to "
+            f"{high:g}. Check units in channels.tsv: volts may be given as microvolts, or the "
+            "reverse."
+        )
+
+
+def common_rate(raws: Sequence[Any], recordings: Sequence[str]) -> Fraction:
+    """Sampling rate that a participant's recordings share, exact.
+
+    Raises
+    ------
+    DataError
+        If they differ.
+    """
+    rates = [tagging.exact_rate(raw.info["sfreq"]) for raw in raws]
+    if len(set(rates)) > 1:
+        listed = ", ".join(f"{n}: {float(r):g} Hz" for n, r in zip(recordings, rates, strict=True))
+        raise DataError(
+            f"the recordings have different working rates ({listed}). Set intake.working_rate_hz "
+            "to a rate that all can be decimated to, or leave recordings out."
+        )
+    return rates[0]

@@ -1,0 +1,222 @@
+"""What stands where: the recordings of a dataset, and every file of the results.
+
+Job graphs are built from this module, so it imports nothing heavy and reads folder listings only.
+"""
+
+import os
+import re
+from collections import defaultdict
+from collections.abc import Collection
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+
+from onbin.errors import DataError, SettingsError
+
+EEG_FORMATS = (".vhdr", ".edf", ".bdf", ".set")
+ENTITIES = ("sub", "ses", "task", "acq", "run")
+RECORDING_PATTERN = r"sub-[A-Za-z0-9+]+(/ses-[A-Za-z0-9+]+)?/eeg/sub-[A-Za-z0-9+_-]+"
+PARTICIPANT_PATTERN = r"sub-[A-Za-z0-9+]+"
+
+# Every file of the results, by name. {recording} is such as sub-01/eeg/sub-01_task-panels and
+# {participant} such as sub-01. Each has a sidecar of the same name that ends in .json.
+FILES = {
+    "intake_signal": "{recording}_desc-intake_eeg.fif",
+    "intake_trials": "{recording}_desc-intake_trials.tsv",
+    "intake_channels": "{recording}_desc-intake_channels.tsv",
+    "filter_signal": "{recording}_desc-filtered_eeg.fif",
+    "filter_gains": "{recording}_desc-filtered_gains.tsv",
+    "sensors_signal": "{recording}_desc-sensors_eeg.fif",
+    "sensors_verdicts": "{recording}_desc-sensors_verdicts.tsv",
+    "components_ica": "{recording}_desc-components_ica.fif",
+    "components_verdicts": "{recording}_desc-components_verdicts.tsv",
+    "windows_signal": "{recording}_desc-clean_eeg.fif",
+    "windows_verdicts": "{recording}_desc-windows_verdicts.tsv",
+    "windows_gains": "{recording}_desc-cleaning_gains.tsv",
+    "spectra_coefficients": "{participant}/eeg/{participant}_desc-terms_coefficients.npz",
+    "spectra_psd": "{participant}/eeg/{participant}_desc-windows_psd.npz",
+    "response_measures": "{participant}/eeg/{participant}_desc-response_measures.tsv",
+    "response_windows": "{participant}/eeg/{participant}_desc-response_windows.tsv",
+    "alpha_measures": "{participant}/eeg/{participant}_desc-alpha_measures.tsv",
+    "alpha_windows": "{participant}/eeg/{participant}_desc-alpha_windows.tsv",
+    "relation_measures": "{participant}/eeg/{participant}_desc-relation_measures.tsv",
+    "relation_windows": "{participant}/eeg/{participant}_desc-relation_windows.tsv",
+    "study_responses": "study/responses.tsv",
+    "study_alpha": "study/alpha.tsv",
+    "study_relation": "study/relation.tsv",
+    "study_comparisons": "study/comparisons.tsv",
+    "study_participants": "study/participants.tsv",
+    "study_group": "study/group_relation.tsv",
+    "report_page": "report.html",
+    "manifest": "manifest.tsv",
+}
+
+
+@dataclass(frozen=True)
+class Recording:
+    """One EEG recording of a dataset.
+
+    Attributes
+    ----------
+    name : str
+        Path below the dataset without ``_eeg`` and extension, such as
+        ``sub-01/ses-2/eeg/sub-01_ses-2_task-panels_run-1``.
+    extension : str
+    files : tuple of str
+        All files that the recording is read from, its data file first.
+    """
+
+    name: str
+    extension: str
+    files: tuple[str, ...]
+
+    @property
+    def participant(self) -> str:
+        """Label with its prefix, such as ``sub-01``."""
+        return self.name.split("/", 1)[0]
+
+    @cached_property
+    def entities(self) -> dict[str, str]:
+        """BIDS entities of the file name."""
+        return entities(self.name)
+
+
+def entities(name: str) -> dict[str, str]:
+    """Read the BIDS entities from a recording's name.
+
+    Examples
+    --------
+    >>> entities("sub-01/eeg/sub-01_task-panels")
+    {'sub': '01', 'task': 'panels'}
+    """
+    parts = name.rsplit("/", 1)[-1].split("_")
+    return dict(part.split("-", 1) for part in parts if "-" in part)
+
+
+def result(results: str, name: str) -> str:
+    """Path of a file of the results, with its wildcards: the one place that makes such paths."""
+    return f"{results}/{FILES[name]}"
+
+
+def sidecar(path: str | Path) -> str:
+    """Path of the sidecar that belongs to an output."""
+    return str(Path(path).with_suffix(".json"))
+
+
+def log(results: str, step: str, scope: str) -> str:
+    """Path of a step's log: ``scope`` is the wildcard that the step runs over, or ``study``."""
+    return f"{results}/logs/{step}/{scope}.log"
+
+
+def benchmark(results: str, step: str, scope: str) -> str:
+    """Path of the file with a step's time and memory."""
+    return f"{results}/logs/{step}/{scope}.benchmark.tsv"
+
+
+def find_recordings(
+    folder: str | Path, tasks: Collection[str] = (), participants: Collection[str] = ()
+) -> list[Recording]:
+    """List the EEG recordings of a BIDS dataset, by folder listings alone.
+
+    Parameters
+    ----------
+    folder : path
+        Root of the dataset; derivatives, sourcedata and code are never entered.
+    tasks, participants : collection of str
+        Labels to take; empty takes all.
+
+    Raises
+    ------
+    SettingsError
+        If the folder is no dataset or holds no such recording.
+    DataError
+        If a recording stands there in two formats.
+    """
+    folder = Path(folder)
+    if not folder.is_dir():
+        found = "is a file" if folder.exists() else "does not exist"
+        raise SettingsError(
+            f"dataset.folder: {folder} {found}; give the folder that holds sub-… folders and "
+            "dataset_description.json."
+        )
+    wanted = {f"sub-{label}" for label in participants}
+    present = [e.name for e in os.scandir(folder) if e.is_dir() and e.name.startswith("sub-")]
+    missing = sorted(wanted - set(present))
+    if missing:
+        raise SettingsError(
+            f"dataset.participants: {folder} has no {', '.join(missing)}; it has "
+            f"{', '.join(sorted(present)) or 'no sub-… folder'}."
+        )
+    recordings = []
+    shared = _data_files(folder)
+    for subject in sorted(wanted or present):
+        root = folder / subject
+        inherited = shared + _data_files(root)
+        sessions = sorted(
+            e.name for e in os.scandir(root) if e.is_dir() and e.name.startswith("ses-")
+        )
+        recordings += _in_folder(folder, root / "eeg", inherited)
+        for session in sessions:
+            own = inherited + _data_files(root / session)
+            recordings += _in_folder(folder, root / session / "eeg", own)
+    if tasks:
+        found_tasks = sorted({r.entities.get("task", "") for r in recordings})
+        recordings = [r for r in recordings if r.entities.get("task") in tasks]
+        if not recordings:
+            raise SettingsError(
+                f"dataset.tasks: no recording of {folder} has task {', '.join(tasks)}; there are "
+                f"{', '.join(found_tasks) or 'no recordings'}."
+            )
+    if not recordings:
+        raise SettingsError(
+            f"dataset.folder: {folder} has no EEG recording; expected files such as "
+            f"sub-01/eeg/sub-01_task-x_eeg{EEG_FORMATS[0]} ({', '.join(EEG_FORMATS)})."
+        )
+    return recordings
+
+
+def _data_files(folder: Path) -> list[str]:
+    """Files of a folder that recordings below it may inherit."""
+    if not folder.is_dir():
+        return []
+    pattern = re.compile(r"(?:.*_)?(?:eeg|events|channels|electrodes|coordsystem)\.(?:json|tsv)$")
+    return [e.path for e in os.scandir(folder) if pattern.match(e.name)]
+
+
+def _in_folder(dataset: Path, folder: Path, inherited: list[str]) -> list[Recording]:
+    if not folder.is_dir():
+        return []
+    names = sorted(entry.name for entry in os.scandir(folder))
+    stems: dict[str, list[str]] = defaultdict(list)
+    for name in names:
+        for extension in EEG_FORMATS:
+            if name.endswith(f"_eeg{extension}"):
+                stems[name.removesuffix(f"_eeg{extension}")].append(extension)
+    recordings = []
+    for stem, extensions in stems.items():
+        if len(extensions) > 1:
+            raise DataError(
+                f"{folder}/{stem}_eeg stands there as {' and '.join(extensions)}; "
+                "keep one of them, or move the other below sourcedata/."
+            )
+        data = f"{stem}_eeg{extensions[0]}"
+        others = [name for name in names if name != data and _belongs(name, stem)]
+        files = [str(folder / data), *(str(folder / name) for name in others)]
+        files += [path for path in inherited if _applies(path, stem)]
+        name = (folder / stem).relative_to(dataset).as_posix()
+        recordings.append(Recording(name, extensions[0], tuple(files)))
+    return recordings
+
+
+def _belongs(name: str, stem: str) -> bool:
+    """Tell whether a file of the same folder describes the recording: its entities are a part."""
+    suffix = name.rsplit("_", 1)[-1]
+    kinds = ("eeg.", "events.", "channels.", "electrodes.", "coordsystem.")
+    return suffix.startswith(kinds) and _applies(name, stem)
+
+
+def _applies(path: str, stem: str) -> bool:
+    """BIDS inheritance: a file applies where all of its entities agree with the recording's."""
+    own, wanted = entities(stem), entities(Path(path).name.rsplit("_", 1)[0])
+    wanted.pop("space", None)
+    return all(own.get(key) == value for key, value in wanted.items())

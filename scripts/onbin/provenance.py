@@ -1,0 +1,90 @@
+"""Where a number comes from: inputs by content, settings, versions."""
+
+import hashlib
+import json
+from collections.abc import Iterable, Mapping
+from importlib import metadata
+from pathlib import Path
+from typing import Any
+
+from onbin import __version__, layout
+
+LIBRARIES = (
+    "mne", "mne-bids", "mne-icalabel", "numpy", "pandas", "python-picard", "scipy", "seaborn",
+    "snakemake", "specparam",
+)  # fmt: skip
+BIDS_VERSION = "1.10.0"
+CHUNK = 1 << 20
+
+
+def sha256(path: str | Path) -> str:
+    """SHA-256 of a file's content."""
+    digest = hashlib.sha256()
+    with open(path, "rb") as file:
+        while chunk := file.read(CHUNK):
+            digest.update(chunk)
+    return digest.hexdigest()
+
+
+def content_hash(path: str | Path) -> str:
+    """SHA-256 of a file; for a file of ours taken from its sidecar, where it was noted."""
+    beside = Path(layout.sidecar(path))
+    if beside != Path(path) and beside.is_file():
+        try:
+            noted = json.loads(beside.read_text(encoding="utf-8"))
+        except (OSError, ValueError):
+            noted = {}
+        if isinstance(noted, dict) and "Provenance" in noted:
+            return noted["Provenance"]["sha256"]
+    return sha256(path)
+
+
+def versions() -> dict[str, str]:
+    """Versions of this package and of the libraries that numbers rest on."""
+    return {"onbin": __version__} | {name: metadata.version(name) for name in LIBRARIES}
+
+
+def make_sidecar(
+    output: str | Path,
+    step: str,
+    inputs: Iterable[str | Path],
+    settings: Mapping[str, Any],
+    about: Mapping[str, Any],
+) -> str:
+    """Text of an output's sidecar.
+
+    Parameters
+    ----------
+    output : path
+        The finished file.
+    step : str
+    inputs : iterable of path
+    settings : mapping
+        The part of the settings that the step was given.
+    about : mapping
+        What else describes the output, such as the dictionary of a table's columns.
+    """
+    sidecar = {
+        **about,
+        "Provenance": {
+            "step": step,
+            "sha256": sha256(output),
+            "inputs": {str(path): content_hash(path) for path in sorted(map(str, inputs))},
+            "settings": settings,
+            "versions": versions(),
+        },
+    }
+    return json.dumps(sidecar, indent=2, ensure_ascii=False) + "\n"
+
+
+def dataset_description(title: str, source: str) -> dict[str, Any]:
+    """Return ``dataset_description.json`` of the results, a BIDS derivative."""
+    return {
+        "Name": f"{title}: results",
+        "BIDSVersion": BIDS_VERSION,
+        "DatasetType": "derivative",
+        "GeneratedBy": [
+            {"Name": "onbin", "Version": __version__, "Description": "Frequency-tagging workflow"}
+        ],
+        "SourceDatasets": [{"URL": source}],
+    }

@@ -1,0 +1,96 @@
+"""Coefficients at every term and its neighbouring bins, and power spectra, window by window."""
+
+import numpy as np
+from onbin import arrays, dataset, sites, spectra, tables, tagging
+from onbin.errors import DataError
+from onbin.runner import run
+
+ALPHA_TERMS_HZ = (5.0, 15.0)  # driven terms in this range are subtracted before alpha is measured
+
+
+def measure_spectra(inputs, outputs, settings):
+    """Measure the windows that were kept of all of a participant's recordings."""
+    raws = [dataset.read_signal(path) for path in inputs.signals]
+    names = [dataset.eeg_names(raw) for raw in raws]
+    rate = dataset.common_rate(raws, settings["recordings"])
+    places = sites.common_sites(names, settings["regions"])
+    tags = tagging.study_tags(settings["terms"])
+    passband_hz = tagging.passband_end(settings["filter"]["lowpass_hz"], float(rate))
+    terms = tagging.study_terms(settings["terms"], passband_hz)
+    length_s = settings["windows"]["length_s"]
+    samples = list(tagging.window_samples(tags, terms, rate, length_s).values())
+    line_hz = raws[0].info["line_freq"] or 0.0  # 0 where the dataset does not tell
+    response = settings["response"]
+    bins = [0, *tagging.neighbour_offsets(response["neighbours"], response["skip"])]
+
+    windows, coefficients, densities, subtracted = [], [], [], []
+    for raw, channels, path, recording in zip(
+        raws, names, inputs.verdicts, settings["recordings"], strict=True
+    ):
+        kept = [row for row in tables.read_table(path) if row["verdict"] == "kept"]
+        windows += [row | {"recording": recording} for row in kept]
+        sites_uv = sites.averaging(places, channels) @ dataset.eeg_uv(raw)
+        n_channels = sum(site.kind == "channel" for site in places)
+        coefficients.append(
+            spectra.bin_coefficients(
+                sites_uv,
+                np.array([row["start_sample"] for row in kept], dtype=int),
+                np.array([row["offset_s"] for row in kept], dtype=float),
+                float(rate),
+                np.array([float(term.frequency) for term in terms]),
+                np.array(samples, dtype=int),
+                np.array(bins),
+            )
+        )
+        for row in kept:
+            driven = settings["conditions"][row["condition"]]["flickering"]
+            stretch = slice(row["start_sample"], row["start_sample"] + row["n_samples"])
+            window_uv = sites_uv[:n_channels, stretch]
+            remaining_uv, removed_uv2 = spectra.remove_sinusoids(
+                window_uv, float(rate), _alpha_terms_hz(terms, driven)
+            )
+            alpha = settings["alpha"]
+            frequencies_hz, psd = spectra.power_spectral_density(
+                remaining_uv, float(rate), alpha["segment_s"], alpha["grid_hz"]
+            )
+            densities.append(psd)
+            subtracted.append(removed_uv2.sum(axis=-1))
+    if not windows:
+        raise DataError("no window was kept; the tables of windows tell the reasons.")
+
+    of_windows = arrays.from_rows(
+        windows, ["recording", "condition", "trial", "window", "offset_s"]
+    )
+    arrays.write(
+        outputs.coefficients,
+        coefficients_uv=np.concatenate(coefficients).astype(np.complex64),
+        bins=bins,
+        samples=samples,
+        rate=str(rate),
+        passband_hz=passband_hz,
+        line_hz=line_hz,
+        site=[site.name for site in places],
+        site_kind=[site.kind for site in places],
+        site_channels=[" ".join(site.channels) for site in places],
+        **of_windows,
+    )
+    arrays.write(
+        outputs.psd,
+        psd_uv2_per_hz=np.stack(densities).astype(np.float32),
+        frequencies_hz=frequencies_hz,
+        subtracted_uv2=np.stack(subtracted),
+        channel=[site.name for site in places if site.kind == "channel"],
+        passband_hz=passband_hz,
+        line_hz=line_hz,
+        **of_windows,
+    )
+
+
+def _alpha_terms_hz(terms, flickering):
+    low_hz, high_hz = ALPHA_TERMS_HZ
+    driven = [float(term.frequency) for term in terms if term.driven_by(flickering)]
+    return np.array([f for f in driven if low_hz <= f <= high_hz])
+
+
+if "snakemake" in globals():
+    run(measure_spectra, snakemake)  # noqa: F821
