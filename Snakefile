@@ -22,7 +22,7 @@ rule all:
     default_target: True
     input:
         result("report_page"),
-        result("manifest"),
+        result("manifest_files"),
 
 
 rule cleaned:

@@ -69,6 +69,21 @@ def of_all_participants(name):
     return [result(name).format(participant=participant) for participant in PARTICIPANTS]
 
 
+def everything():
+    """Every file of the results but the manifest."""
+    return [
+        *(path for name in layout.names("recording") for path in of_all_recordings(name)),
+        *(path for name in layout.names("participant") for path in of_all_participants(name)),
+        *(result(name) for name in layout.names("study")),
+    ]
+
+
+def participants_table():
+    """participants.tsv of the dataset, if it has one."""
+    path = Path(STUDY.dataset.folder) / "participants.tsv"
+    return [str(path)] if path.is_file() else []
+
+
 def settings_part(*names, **others):
     """A rule's own part of the settings."""
     return part(STUDY, *names) | others

@@ -151,9 +151,7 @@ def alpha_rows(
                 "alpha_power_uv2": power_uv2[index],
                 "alpha_power_db": 10 * np.log10(power_uv2[index]),
                 "alpha_fixed_uv2": alpha.band_power(*bounds, *fixed_hz),
-                "alpha_periodic_uv2": alpha.periodic_power(
-                    *bounds, fit, band.low_hz, band.high_hz
-                ),
+                "alpha_periodic_uv2": alpha.periodic_power(*bounds, fit, band.low_hz, band.high_hz),
                 "alpha_relative": alpha.relative_power(*bounds, band.low_hz, band.high_hz),
                 "alpha_lateralisation": (
                     alpha.lateralisation(*sides) if sides and site.name == right else np.nan
@@ -165,9 +163,7 @@ def alpha_rows(
             }
 
 
-def window_rows(
-    spectra: Spectra, places: Sequence[Site], band: Band
-) -> Iterator[dict[str, Any]]:
+def window_rows(spectra: Spectra, places: Sequence[Site], band: Band) -> Iterator[dict[str, Any]]:
     """Alpha power of each region in each window."""
     regions = [site for site in places if site.kind == "region"]
     matrix = sites.averaging(regions, spectra.channels)

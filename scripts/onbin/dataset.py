@@ -210,9 +210,7 @@ def _nothing_found(
         values = sorted({row[column] for row in rows if column in row})
         if values:
             there.append(f"{column}: {', '.join(values[:12])}{' ...' if len(values) > 12 else ''}")
-    found = "; ".join(there) or (
-        f"columns {', '.join(rows[0])}" if rows else "no rows"
-    )
+    found = "; ".join(there) or (f"columns {', '.join(rows[0])}" if rows else "no rows")
     return f"{events} has no event of any condition. It has {found}. Compare with conditions."
 
 

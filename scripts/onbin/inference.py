@@ -327,9 +327,9 @@ def two_group_test(first: np.ndarray, second: np.ndarray, seed: int) -> Permutat
     else:
         order = np.random.default_rng(seed).permuted(np.tile(np.arange(n), (DRAWS, 1)), axis=1)
         chosen = order[:, :n_first]
-    # Means of deviations from the grand mean: a large common level must not hide ties.
-    pooled = (pooled - pooled.mean()) * (1 / n_first + 1 / second.size)
-    observed, arranged = pooled[:n_first].sum(), pooled[chosen].sum(axis=1)
+    # Deviations from the grand mean sum to zero: those of one group give the difference.
+    deviations = (pooled - pooled.mean()) * (1 / n_first + 1 / second.size)
+    observed, arranged = deviations[:n_first].sum(), deviations[chosen].sum(axis=1)
     return _two_sided(observed, arranged, exact, np.abs(pooled).max(), n)
 
 

@@ -19,7 +19,8 @@ RECORDING_PATTERN = r"sub-[A-Za-z0-9+]+(/ses-[A-Za-z0-9+]+)?/eeg/sub-[A-Za-z0-9+
 PARTICIPANT_PATTERN = r"sub-[A-Za-z0-9+]+"
 
 # Every file of the results, by name. {recording} is such as sub-01/eeg/sub-01_task-panels and
-# {participant} such as sub-01. Each has a sidecar of the same name that ends in .json.
+# {participant} such as sub-01. Each has a sidecar of the same name that ends in .json, but for the
+# last three, which make the results a BIDS dataset.
 FILES = {
     "intake_signal": "{recording}_desc-intake_eeg.fif",
     "intake_trials": "{recording}_desc-intake_trials.tsv",
@@ -48,7 +49,16 @@ FILES = {
     "study_participants": "study/participants.tsv",
     "study_group": "study/group_relation.tsv",
     "report_page": "report.html",
-    "manifest": "manifest.tsv",
+    "report_quality": "study/figures/quality.png",
+    "report_bins": "study/figures/bins.png",
+    "report_topographies": "study/figures/topographies.png",
+    "report_responses": "study/figures/responses.png",
+    "report_alpha": "study/figures/alpha.png",
+    "report_relation": "study/figures/relation.png",
+    "manifest_files": "manifest.tsv",
+    "describe_description": "dataset_description.json",
+    "describe_readme": "README",
+    "describe_ignore": ".bidsignore",
 }
 
 
@@ -96,6 +106,18 @@ def entities(name: str) -> dict[str, str]:
 def result(results: str, name: str) -> str:
     """Path of a file of the results, with its wildcards: the one place that makes such paths."""
     return f"{results}/{FILES[name]}"
+
+
+def names(scope: str) -> list[str]:
+    """Names of the files of one scope: ``recording``, ``participant`` or ``study``.
+
+    Those of the study leave out the manifest, which lists all others.
+    """
+    of_scope = {
+        name: next((s for s in ("recording", "participant") if f"{{{s}}}" in path), "study")
+        for name, path in FILES.items()
+    }
+    return [n for n, s in of_scope.items() if s == scope and n != "manifest_files"]
 
 
 def sidecar(path: str | Path) -> str:

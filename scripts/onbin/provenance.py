@@ -14,6 +14,13 @@ LIBRARIES = (
     "snakemake", "specparam",
 )  # fmt: skip
 BIDS_VERSION = "1.10.0"
+# What BIDS has no names for yet (spectra, ICA and epochs of EEG derivatives are not settled), and
+# the report.
+IGNORED = (
+    "*.fif", "*_eeg.json", "*_ica.json", "*_trials.*", "*_gains.*", "*_verdicts.*",
+    "*_coefficients.*", "*_psd.*", "*_measures.*", "*_windows.*", "study", "report.*",
+    "manifest.*",
+)  # fmt: skip
 CHUNK = 1 << 20
 
 
@@ -87,4 +94,34 @@ def dataset_description(title: str, source: str) -> dict[str, Any]:
             {"Name": "onbin", "Version": __version__, "Description": "Frequency-tagging workflow"}
         ],
         "SourceDatasets": [{"URL": source}],
+    }
+
+
+def results_readme(title: str) -> str:
+    """README of the results."""
+    return f"""{title}: results
+
+Made by onbin {__version__} from the dataset named in dataset_description.json, which was only read.
+report.html is for people; study/ has the tables and figures behind it; sub-* has every step of
+every recording. Each file has a sidecar of the same name that ends in .json, with the inputs by
+SHA-256, the settings used and the versions; in a table's sidecar every column is explained.
+manifest.tsv lists all files. logs/ has what each step said, and its time and memory.
+
+For research. This is no diagnosis and no medical device. EEG is personal health data: keep it and
+what is made of it as your ethics board and the law of the place require.
+"""
+
+
+def manifest_row(path: Path, results: Path) -> dict[str, Any]:
+    """One line of the manifest."""
+    beside = Path(layout.sidecar(path))
+    noted = {}
+    if beside != path and beside.is_file():
+        noted = json.loads(beside.read_text(encoding="utf-8"))["Provenance"]
+    return {
+        "file": path.relative_to(results).as_posix(),
+        "step": noted.get("step", "describe"),
+        "bytes": path.stat().st_size,
+        "sha256": sha256(path),
+        "inputs": " ".join(noted.get("inputs", ())) or None,
     }

@@ -44,8 +44,9 @@ def run(step: Callable[..., None], job: Any) -> None:
                     outputs=SimpleNamespace(**making),
                     settings=job.params.settings,
                 )
-                for name, path in making.items():
-                    _write_sidecar(path, outputs[name], job)
+                if "sidecars" in job.output.keys():
+                    for path in making.values():
+                        _write_sidecar(path, job)
         except OnbinError as error:
             _fail(f"{job.rule}: {error}", job)
         except Exception as error:
@@ -96,7 +97,9 @@ def _whole_or_absent(outputs: dict[str, Path]) -> Iterator[dict[str, Path]]:
         yield making
         for name, path in outputs.items():
             path.parent.mkdir(parents=True, exist_ok=True)
-            os.replace(layout.sidecar(making[name]), layout.sidecar(path))
+            beside = Path(layout.sidecar(making[name]))
+            if beside != making[name] and beside.exists():
+                os.replace(beside, layout.sidecar(path))
             os.replace(making[name], path)
     finally:
         shutil.rmtree(folder, ignore_errors=True)
@@ -112,11 +115,10 @@ def _alive(pid: int) -> bool:
     return True
 
 
-def _write_sidecar(made: Path, output: Path, job: Any) -> None:
+def _write_sidecar(made: Path, job: Any) -> None:
     about = {"Description": f"Made by the step {job.rule} of onbin."}
     if made.suffix == ".tsv":
-        with open(made, encoding="utf-8") as file:
-            about = tables.dictionary(file.readline().rstrip("\n").split("\t"))
+        about = tables.dictionary(tables.header(made))
     text = provenance.make_sidecar(made, job.rule, map(str, job.input), job.params.settings, about)
     Path(layout.sidecar(made)).write_text(text, encoding="utf-8")
 

@@ -1,6 +1,6 @@
 """Sensors: which channels can be trusted and why, interpolation and reference."""
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,10 +10,15 @@ from onbin.filtering import apply_fir, design_lowpass
 
 GOOD, BAD = "good", "bad"
 
-# Figures that compare a channel with the others need this many of them.
-FEWEST_TO_COMPARE = 8
-FEWEST_TO_PREDICT = 16
-SLOW_BAND_HZ = 30.0
+# A robust z across channels, a common median and correlations need this many channels; below it
+# only ratios to the median channel are judged, with limits so much wider, and from 3 channels on.
+FEWEST_TO_COMPARE, FEW_CHANNELS_FACTOR, FEWEST_FOR_MEDIAN = 8, 1.5, 3
+N_NEAREST = 5
+# Prediction from others: channels that it needs, random draws, and the share of channels in each.
+FEWEST_TO_PREDICT, N_DRAWS, DRAWN_SHARE, FEWEST_DRAWN = 20, 50, 0.25, 8
+# Correlations are taken from at most so many windows, spread evenly: bounded time and memory.
+MOST_WINDOWS = 600
+SLOW_BAND_HZ, NOISE_BAND_HZ = (1.0, 30.0), (30.0, 45.0)
 
 
 @dataclass(frozen=True)
@@ -27,29 +32,22 @@ class SensorLimits:
     saturated_share : float
         Largest share of samples that stand still at the channel's extreme.
     dropout_share : float
-        Largest share of samples in stretches of 50 ms and more that stand still elsewhere.
+        Largest share of samples that stand still elsewhere, for 50 ms or longer.
     pops_per_min : float
-        Most jumps a minute that no other channel shares.
+        Most lasting jumps a minute that few other channels share.
     pop_uv : float
         Smallest step that is a jump.
-    deviation_z : float
-        Robust z of the logarithm of the amplitude across channels, either way.
-    deviation_ratio : float
-        What counts as deviating is at least this many times larger or smaller than the median.
-    noise_z, noise_ratio : float
-        The same for the ratio of power density above 30 Hz to that below, upwards only.
-    noise_floor : float
-        A ratio below this is never noise, whatever the other channels show.
-    noise_ceiling : float
-        With few channels, a ratio above this is noise: as good as white.
-    correlation : float
-        In a window of 1 s a channel should reach this with at least one other channel.
-    uncorrelated_share : float
-        Largest share of windows in which it does not.
-    prediction : float
-        Correlation with its prediction from other channels, in windows of 4 s.
-    unpredicted_share : float
-        Largest share of windows in which it is not reached.
+    deviation_z, deviation_ratio : float
+        Deviating means both: this far from the others in robust z of log amplitude, and so many
+        times larger or smaller than the median channel.
+    noise_z, noise_ratio, noise_whiteness : float
+        High-frequency noise means all three: robust z of log amplitude within 30-45 Hz, its ratio
+        to the median channel, and median power density of 30-45 Hz over that of 1-30 Hz.
+    correlation, uncorrelated_share : float
+        Correlation with the channel's best partner, in windows of 1 s, and the largest share of
+        windows that may stay below it.
+    prediction, unpredicted_share : float
+        The same for the correlation with the channel's prediction from others, windows of 4 s.
     """
 
     flat_uv: float = 0.5
@@ -60,21 +58,20 @@ class SensorLimits:
     deviation_z: float = 5.0
     deviation_ratio: float = 3.0
     noise_z: float = 5.0
-    noise_ratio: float = 4.0
-    noise_floor: float = 0.05
-    noise_ceiling: float = 0.5
+    noise_ratio: float = 6.0
+    noise_whiteness: float = 0.4
     correlation: float = 0.4
-    uncorrelated_share: float = 0.2
-    prediction: float = 0.6
-    unpredicted_share: float = 0.4
+    uncorrelated_share: float = 0.4
+    prediction: float = 0.4
+    unpredicted_share: float = 0.6
 
 
 @dataclass(frozen=True)
 class ChannelVerdict:
     """Verdict on one channel, ``good`` or ``bad``, its reasons, its figures and their limits.
 
-    `figures` and `limits` have the same keys. A figure that could not be had (too few channels,
-    no position) is None.
+    `figures` and `limits` have the same keys, fields of `SensorLimits`. A figure that could not be
+    had (too few channels, no position) is None.
     """
 
     channel: str
@@ -102,88 +99,344 @@ def judge_channels(
     seed: int,
     recorded_uv: np.ndarray | None = None,
 ) -> list[ChannelVerdict]:
-    pass
+    """Judge each channel by itself, then against the channels that are trusted so far.
+
+    Parameters
+    ----------
+    data_uv : ndarray, shape (n_channels, n_times)
+        High-passed signal.
+    names : sequence of str
+        Channels.
+    sfreq_hz : float
+        Sampling rate.
+    positions_m : ndarray, shape (n_channels, 3)
+        Positions, NaN where there is none.
+    limits : SensorLimits
+        When a channel is bad.
+    seed : int
+        Of the random draws of channels that predict the others.
+    recorded_uv : ndarray, shape (n_channels, n_times), optional
+        The signal before the high-pass, for standing still, extremes and jumps: a filter bends
+        them. `data_uv` when left out.
+
+    Returns
+    -------
+    list of ChannelVerdict
+        One for each channel, in order.
+
+    Notes
+    -----
+    The criteria are those of Bigdely-Shamlo et al. 2015 in kind (from memory), with medians over
+    time throughout, so that blinks and bursts of muscle or alpha do not count against a channel.
+    """
+    recorded_uv = data_uv if recorded_uv is None else recorded_uv
+    n_channels = len(names)
+    found: dict[str, np.ndarray] = {}
+    reasons: dict[str, np.ndarray] = {}
+
+    found["flat_uv"] = _robust_amplitude(data_uv)
+    flat = found["flat_uv"] < limits.flat_uv
+    found["saturated_share"], found["dropout_share"] = _still_shares(recorded_uv, sfreq_hz)
+    found["pops_per_min"] = _pops_per_min(recorded_uv, sfreq_hz, limits.pop_uv)
+    reasons["flat"] = flat
+    reasons["saturated"] = ~flat & (found["saturated_share"] > limits.saturated_share)
+    reasons["drop-outs"] = ~flat & (found["dropout_share"] > limits.dropout_share)
+    reasons["jumps"] = ~flat & (found["pops_per_min"] > limits.pops_per_min)
+
+    def trusted() -> np.ndarray:
+        return np.flatnonzero(~np.any(list(reasons.values()), axis=0))
+
+    many = trusted().size >= FEWEST_TO_COMPARE
+    widened = 1.0 if many else FEW_CHANNELS_FACTOR
+    common_uv = np.median(data_uv[trusted()], axis=0) if many else 0.0
+    slow_uv, rate_hz, noise_uv, found["noise_whiteness"] = _bands(data_uv, common_uv, sfreq_hz)
+    if trusted().size >= FEWEST_FOR_MEDIAN:
+        away, ratio = _against_others(_robust_amplitude(slow_uv), trusted(), positions_m)
+        noise_away, noise_ratio = _against_others(noise_uv, trusted(), positions_m)
+        found["deviation_ratio"], found["noise_ratio"] = np.maximum(ratio, 1 / ratio), noise_ratio
+        deviating = found["deviation_ratio"] > limits.deviation_ratio * widened
+        noisy = noise_ratio > limits.noise_ratio * widened
+        noisy &= found["noise_whiteness"] > limits.noise_whiteness
+        if many:
+            found["deviation_z"], found["noise_z"] = away, noise_away
+            deviating &= np.abs(away) > limits.deviation_z
+            noisy &= noise_away > limits.noise_z
+        reasons["high-frequency noise"] = ~flat & noisy
+        reasons["deviating amplitude"] = ~flat & deviating & ~noisy
+    if trusted().size >= FEWEST_TO_COMPARE:
+        correlations = _partner_correlation(slow_uv, rate_hz, trusted())
+        found["uncorrelated_share"] = (correlations < limits.correlation).mean(axis=0)
+        reasons["uncorrelated"] = ~flat & (found["uncorrelated_share"] > limits.uncorrelated_share)
+    placed = np.isfinite(positions_m).all(axis=1)
+    sources = trusted()[placed[trusted()]]
+    if sources.size >= FEWEST_TO_PREDICT:
+        share = np.full(n_channels, np.nan)
+        predictions = _prediction_correlation(
+            slow_uv[placed],
+            rate_hz,
+            positions_m[placed],
+            np.flatnonzero(np.isin(np.flatnonzero(placed), sources)),
+            np.random.default_rng(seed),
+        )
+        share[placed] = (predictions < limits.prediction).mean(axis=0)
+        found["unpredicted_share"] = share
+        reasons["unpredicted"] = ~flat & (share > limits.unpredicted_share)
+
+    limited = {
+        name: float(getattr(limits, name) * (widened if name.endswith("_ratio") else 1.0))
+        for name in SensorLimits.__dataclass_fields__
+        if name not in ("pop_uv", "correlation", "prediction")
+    }
+    verdicts = []
+    for index, name in enumerate(names):
+        figures = {
+            key: float(found[key][index])
+            if np.isfinite(found.get(key, [np.nan] * n_channels)[index])
+            else None
+            for key in limited
+        }
+        why = tuple(reason for reason, is_bad in reasons.items() if is_bad[index])
+        verdicts.append(ChannelVerdict(name, BAD if why else GOOD, why, figures, limited))
+    return verdicts
 
 
-def _robust_amplitude(data_uv):
-    low, high = np.percentile(data_uv, [25, 75], axis=1)
-    return (high - low) / 1.349
+def _robust_amplitude(data_uv: np.ndarray) -> np.ndarray:
+    return np.array([np.subtract(*np.percentile(row, [75, 25])) / 1.349 for row in data_uv])
 
 
-def _robust_z(values, trusted):
-    centre = np.median(values[trusted])
-    deviation = 1.4826 * np.median(np.abs(values[trusted] - centre))
-    return (values - centre) / max(deviation, 1e-12)
+def _against_others(
+    amplitude_uv: np.ndarray, trusted: np.ndarray, positions_m: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """Robust z of the log amplitude, and ratio, against the nearest trusted channels.
+
+    Neighbours share alpha, blinks and the nearness of the reference, so that what is left is the
+    channel's own. A channel without a position is held against all trusted ones.
+    """
+    logs = np.log(np.maximum(amplitude_uv, 1e-12))
+    away = np.empty(logs.size)
+    for channel in range(logs.size):
+        others = trusted[trusted != channel]
+        distance_m = np.linalg.norm(positions_m[others] - positions_m[channel], axis=1)
+        nearest = others[np.argsort(distance_m, kind="stable")[:N_NEAREST]]
+        is_placed = np.isfinite(distance_m).sum() >= N_NEAREST
+        away[channel] = logs[channel] - np.median(logs[nearest if is_placed else others])
+    deviation = 1.4826 * np.median(np.abs(away[trusted]))
+    return away / max(deviation, 1e-12), np.exp(away)
 
 
-def _slow(data_uv: np.ndarray, sfreq_hz: float) -> tuple[np.ndarray, float]:
-    """Low-pass at 30 Hz, at a rate just enough for it."""
-    taps = design_lowpass(sfreq_hz, min(SLOW_BAND_HZ, 0.4 * sfreq_hz)).taps
-    step = max(int(sfreq_hz // 80), 1)
-    return np.stack([apply_fir(row, taps)[::step] for row in data_uv]), sfreq_hz / step
+def _runs(mask: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """First samples and lengths of the stretches where `mask` holds."""
+    edges = np.diff(np.concatenate([[0], mask.astype(np.int8), [0]]))
+    starts = np.flatnonzero(edges == 1)
+    return starts, np.flatnonzero(edges == -1) - starts
 
 
-def _noise_ratio(data_uv: np.ndarray, sfreq_hz: float) -> np.ndarray:
+def _still_shares(data_uv: np.ndarray, sfreq_hz: float) -> tuple[np.ndarray, np.ndarray]:
+    """Shares of samples that stand still: at the channel's extreme, and elsewhere.
+
+    A stretch in which most channels stand still is a gap in the recording, no channel's fault.
+    """
+    typical_uv = np.median([np.median(np.abs(np.diff(row))) for row in data_uv])
+    still = np.array([np.abs(np.diff(row)) <= 0.02 * typical_uv for row in data_uv])
+    still &= still.sum(axis=0) <= max(len(data_uv) / 2, 1)
+    shares = np.zeros((2, len(data_uv)))
+    for channel, row in enumerate(data_uv):
+        starts, lengths = _runs(still[channel])
+        low, high = row.min(), row.max()
+        margin = 0.01 * (high - low)
+        extreme = (row[starts] <= low + margin) | (row[starts] >= high - margin)
+        shares[0, channel] = lengths[extreme & (lengths >= 2)].sum()
+        shares[1, channel] = lengths[~extreme & (lengths >= 0.05 * sfreq_hz)].sum()
+    return tuple(shares / data_uv.shape[1])
+
+
+def _pops_per_min(data_uv: np.ndarray, sfreq_hz: float, pop_uv: float) -> np.ndarray:
+    """Rate of jumps within 20 ms that last 100 ms and that few channels share."""
+    lag, around = max(round(0.02 * sfreq_hz), 1), max(round(0.1 * sfreq_hz), 1)
+    jumps = []
+    for row in data_uv:
+        steps = np.abs(row[lag:] - row[:-lag])
+        limit = max(pop_uv, 10 * np.median(steps) / 0.6745)
+        candidates = np.flatnonzero(steps > limit)
+        groups = np.split(candidates, np.flatnonzero(np.diff(candidates) > around) + 1)
+        found = []
+        for group in groups:
+            if group.size == 0 or group[0] < around or group[-1] + lag + around > row.size:
+                continue
+            before = np.median(row[group[0] - around : group[0]])
+            after = np.median(row[group[-1] + lag : group[-1] + lag + around])
+            if abs(after - before) > pop_uv:
+                found.append(group[0])
+        jumps.append(np.array(found, dtype=int))
+    everywhere = np.sort(np.concatenate(jumps))
+    most_shared = max(len(data_uv) // 4, 1)
+    rates = []
+    for found in jumps:
+        first = np.searchsorted(everywhere, found - around)
+        last = np.searchsorted(everywhere, found + around, side="right")
+        rates.append(np.sum(last - first <= most_shared))
+    return np.array(rates) / (data_uv.shape[1] / sfreq_hz / 60)
+
+
+def _bands(
+    data_uv: np.ndarray, common_uv: np.ndarray | float, sfreq_hz: float
+) -> tuple[np.ndarray, float, np.ndarray, np.ndarray]:
+    """Slow signal and its rate, robust amplitude in the noise band, and whiteness."""
     from scipy.signal import welch
 
+    taps = design_lowpass(sfreq_hz, min(SLOW_BAND_HZ[1], 0.4 * sfreq_hz)).taps
+    step = max(int(sfreq_hz // 80), 1)
     n_window = min(round(2 * sfreq_hz), data_uv.shape[1])
-    ratios = []
+    slow_uv, noise_uv, whiteness = [], [], []
     for row in data_uv:
-        frequencies_hz, density = welch(row, sfreq_hz, nperseg=n_window, average="median")
-        slow = (frequencies_hz >= 1) & (frequencies_hz <= 30)
-        fast = (frequencies_hz > 30) & (frequencies_hz <= min(45, 0.45 * sfreq_hz))
-        ratios.append(np.median(density[fast]) / max(np.median(density[slow]), 1e-30))
-    return np.array(ratios)
+        signal = row - common_uv
+        slow_uv.append(apply_fir(signal, taps)[::step])
+        frequency_hz, density = welch(signal, sfreq_hz, nperseg=n_window, average="median")
+        slow = (frequency_hz >= SLOW_BAND_HZ[0]) & (frequency_hz <= SLOW_BAND_HZ[1])
+        noise = (frequency_hz > NOISE_BAND_HZ[0]) & (frequency_hz <= NOISE_BAND_HZ[1])
+        # Medians over time and over bins: neither a burst nor a tag or the line is noise.
+        level = np.median(density[noise]) if noise.any() else 0.0
+        noise_uv.append(np.sqrt(level * (NOISE_BAND_HZ[1] - NOISE_BAND_HZ[0])))
+        whiteness.append(level / max(np.median(density[slow]), 1e-30))
+    return np.stack(slow_uv), sfreq_hz / step, np.array(noise_uv), np.array(whiteness)
 
 
-def _max_correlation(slow_uv, rate_hz, others):
-    n = round(rate_hz)
-    k = slow_uv.shape[1] // n
-    out = np.empty((slow_uv.shape[0], k))
-    for w in range(k):
-        x = slow_uv[:, w * n : (w + 1) * n]
-        x = x - x.mean(axis=1, keepdims=True)
-        x = x / np.maximum(np.linalg.norm(x, axis=1, keepdims=True), 1e-12)
-        c = np.abs(x @ x[others].T)
-        c[others, np.arange(len(others))] = 0
-        out[:, w] = c.max(axis=1)
-    return out
+def _windows(signal: np.ndarray, n_window: int, most: int) -> Iterator[np.ndarray]:
+    n_whole = signal.shape[1] // n_window
+    for index in np.unique(np.linspace(0, n_whole - 1, min(n_whole, most)).astype(int)):
+        yield signal[:, index * n_window : (index + 1) * n_window]
 
 
-def spline_weights(from_m, to_m):
-    """Perrin"""
-    unit_from = from_m / np.linalg.norm(from_m, axis=1, keepdims=True)
-    unit_to = to_m / np.linalg.norm(to_m, axis=1, keepdims=True)
+def _partner_correlation(slow_uv: np.ndarray, rate_hz: float, trusted: np.ndarray) -> np.ndarray:
+    """Correlation with the best partner, counted in its usual sign, shape (n_windows, n_channels).
 
-    def g(cosine):
-        n = np.arange(1, 51)
-        factors = np.r_[0, (2 * n + 1) / (n * (n + 1.0)) ** 4 / (4 * np.pi)]
-        return np.polynomial.legendre.legval(cosine, factors)
+    The partner is the trusted channel whose median correlation is largest: the largest correlation
+    within each window would be large by chance among many channels.
+    """
+    correlations = []
+    for window in _windows(slow_uv, round(rate_hz), MOST_WINDOWS):
+        centred = window - window.mean(axis=1, keepdims=True)
+        centred /= np.maximum(np.linalg.norm(centred, axis=1, keepdims=True), 1e-12)
+        correlations.append(centred @ centred[trusted].T)
+    correlations = np.array(correlations)
+    typical = np.median(correlations, axis=0)
+    typical[trusted, np.arange(trusted.size)] = 0  # not with itself
+    partner = np.abs(typical).argmax(axis=1)
+    every = np.arange(len(slow_uv))
+    return correlations[:, every, partner] * np.sign(typical[every, partner])
 
-    n = len(from_m)
-    system = np.ones((n + 1, n + 1))
-    system[:n, :n] = g(unit_from @ unit_from.T) + 1e-5 * np.eye(n)
-    system[n, n] = 0
-    inverse = np.linalg.pinv(system)[:, :n]
-    return np.hstack([g(unit_to @ unit_from.T), np.ones((len(to_m), 1))]) @ inverse
+
+def _prediction_correlation(
+    slow_uv: np.ndarray,
+    rate_hz: float,
+    positions_m: np.ndarray,
+    trusted: np.ndarray,
+    rng: np.random.Generator,
+) -> np.ndarray:
+    """Correlation with the median of predictions by random draws, (n_windows, n_channels)."""
+    n_drawn = max(round(DRAWN_SHARE * trusted.size), FEWEST_DRAWN)
+    draws = [np.sort(rng.choice(trusted, n_drawn, replace=False)) for _ in range(N_DRAWS)]
+    weights = [spline_weights(positions_m[drawn], positions_m) for drawn in draws]
+    correlations = []
+    for window in _windows(slow_uv, round(4 * rate_hz), MOST_WINDOWS // 4):
+        predicted = np.empty((N_DRAWS, *window.shape))
+        for draw, (drawn, weight) in enumerate(zip(draws, weights, strict=True)):
+            predicted[draw] = weight @ window[drawn]
+            predicted[draw, drawn] = np.nan  # no channel predicts itself
+        row = []
+        for channel, signal in enumerate(window):
+            of_channel = predicted[:, channel]
+            of_channel = of_channel[np.isfinite(of_channel[:, 0])]
+            middle = np.median(of_channel, axis=0)
+            size = np.std(signal) * np.std(middle)
+            product = np.mean((signal - signal.mean()) * (middle - middle.mean()))
+            row.append(product / max(size, 1e-12))
+        correlations.append(row)
+    return np.array(correlations)
 
 
-def _prediction(slow_uv, rate_hz, positions_m, others, rng, share=0.25, n_draws=50):
-    n = round(4 * rate_hz)
-    k = slow_uv.shape[1] // n
-    n_ch = len(slow_uv)
-    size = max(round(share * len(others)), 8)
-    weights = np.full((n_draws, n_ch, n_ch), 0.0)
-    used = np.zeros((n_draws, n_ch), bool)
-    for d in range(n_draws):
-        chosen = rng.choice(others, size, replace=False)
-        weights[d][:, chosen] = spline_weights(positions_m[chosen], positions_m)
-        used[d, chosen] = True
-    out = np.empty((n_ch, k))
-    for w in range(k):
-        x = slow_uv[:, w * n : (w + 1) * n]
-        p = weights @ x
-        p[used] = np.nan
-        p = np.nanmedian(p, axis=0)
-        out[:, w] = [np.corrcoef(a, b)[0, 1] for a, b in zip(x, p)]
-    return out
+def spline_weights(from_m: np.ndarray, to_m: np.ndarray) -> np.ndarray:
+    """Weights that predict potentials at `to_m` from those at `from_m` by spherical splines.
+
+    Splines of order 4 with a constant (Perrin et al. 1989), positions taken from the origin.
+
+    Parameters
+    ----------
+    from_m, to_m : ndarray, shape (n_from, 3) and (n_to, 3)
+        Positions.
+
+    Returns
+    -------
+    ndarray, shape (n_to, n_from)
+    """
+    degree = np.arange(1, 51)
+    series = np.r_[0.0, (2 * degree + 1) / (degree * (degree + 1.0)) ** 4 / (4 * np.pi)]
+    from_unit, to_unit = (
+        positions_m / np.linalg.norm(positions_m, axis=1, keepdims=True)
+        for positions_m in (from_m, to_m)
+    )
+    n_from = len(from_m)
+    system = np.ones((n_from + 1, n_from + 1))
+    system[:-1, :-1] = np.polynomial.legendre.legval(from_unit @ from_unit.T, series)
+    system[np.arange(n_from), np.arange(n_from)] += 1e-5
+    system[-1, -1] = 0.0
+    at_target = np.polynomial.legendre.legval(to_unit @ from_unit.T, series)
+    return np.hstack([at_target, np.ones((len(to_m), 1))]) @ np.linalg.pinv(system)[:, :-1]
+
+
+def interpolate_and_reference(
+    raw, bad: Sequence[str], reference: str | Sequence[str] | None
+) -> Referenced:
+    """Interpolate the bad channels by spherical splines, then reference.
+
+    Parameters
+    ----------
+    raw : mne.io.Raw
+        EEG channels only; it is not changed.
+    bad : sequence of str
+        Channels to interpolate. One without a position is left out instead.
+    reference : "average", sequence of str or None
+        Average of all channels, mean of the named channels, or as recorded.
+
+    Returns
+    -------
+    Referenced
+
+    Raises
+    ------
+    DataError
+        When no channel is left to interpolate from, or the reference cannot be used.
+    """
+    raw = raw.copy()
+    placed = {
+        channel["ch_name"]
+        for channel in raw.info["chs"]
+        if np.isfinite(channel["loc"][:3]).all() and np.any(channel["loc"][:3])
+    }
+    bad = [name for name in raw.ch_names if name in set(bad)]
+    left_out = {name: "bad, and without a position" for name in bad if name not in placed}
+    interpolated = tuple(name for name in bad if name in placed)
+    sources = placed - set(bad)
+    if interpolated and len(sources) < FEWEST_FOR_MEDIAN:
+        raise DataError(
+            f"{len(bad)} of {len(raw.ch_names)} channels are bad ({', '.join(bad)}) and "
+            f"{len(sources)} good ones with positions are left to interpolate from; at least "
+            f"{FEWEST_FOR_MEDIAN} are needed: look at the limits for channels, or leave the "
+            "recording out."
+        )
+    if len(left_out) == len(raw.ch_names):
+        raise DataError("All channels are bad and none has a position: leave the recording out.")
+    raw.drop_channels(list(left_out))
+    raw.info["bads"] = list(interpolated)
+    if interpolated:
+        raw.interpolate_bads(mode="accurate", method={"eeg": "spline"}, verbose="error")
+    if reference is not None:
+        names = raw.ch_names if reference == "average" else list(reference)
+        unusable = [name for name in names if name not in raw.ch_names or name in interpolated]
+        if reference != "average" and unusable:
+            raise DataError(
+                f"The reference channel {', '.join(unusable)} is not among the good channels "
+                f"({', '.join(raw.ch_names)}): choose another reference, or leave the recording out."
+            )
+        raw.set_eeg_reference(reference if reference == "average" else names, verbose="error")
+    return Referenced(raw, interpolated, left_out)

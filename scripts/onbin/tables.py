@@ -114,3 +114,9 @@ def _read(name: str, text: str) -> Any:
     if kind == "boolean":
         return text == "true"
     return text
+
+
+def header(path: str | Path) -> list[str]:
+    """Names of a table's columns."""
+    with open(path, encoding="utf-8", newline="") as file:
+        return next(csv.reader(file, delimiter="\t"))

@@ -1,0 +1,61 @@
+# From everybody's measures to the study's tables.
+
+
+rule study:
+    input:
+        people=participants_table(),
+        sensors=of_all_recordings("sensors_verdicts"),
+        components=of_all_recordings("components_verdicts"),
+        windows=of_all_recordings("windows_verdicts"),
+        responses=of_all_participants("response_measures"),
+        alphas=of_all_participants("alpha_measures"),
+        relations=of_all_participants("relation_measures"),
+        relation_windows=of_all_participants("relation_windows"),
+    output:
+        **made(
+            "study",
+            "participants",
+            "responses",
+            "alpha",
+            "relation",
+            "comparisons",
+            "group",
+        ),
+    log:
+        log_of("study"),
+    benchmark:
+        benchmark_of("study")
+    threads: 1
+    resources:
+        mem_mb=2000,
+        runtime=30,
+    params:
+        settings=settings_part(
+            "sensors.max_bad_share",
+            "trust",
+            "comparisons",
+            "seed",
+            recordings=[recording.name for recording in RECORDINGS],
+            participants={who: recordings_of(who) for who in PARTICIPANTS},
+        ),
+        code=code("study"),
+    message:
+        "study: bringing everybody together"
+    script:
+        "../scripts/study.py"
+
+
+rule describe:
+    output:
+        description=result("describe_description"),
+        readme=result("describe_readme"),
+        ignore=result("describe_ignore"),
+    log:
+        log_of("describe"),
+    params:
+        settings=settings_part("study", "dataset.folder"),
+        code=code("describe"),
+    message:
+        "describe: naming the results as a BIDS derivative"
+    script:
+        "../scripts/describe.py"
