@@ -34,12 +34,16 @@ def test_relation_within_conditions():
 
 
 def test_a_difference_between_conditions_is_no_relation():
-    # Alpha and amplitude share their condition's level and nothing else.
+    # Alpha and amplitude share their condition's level and its spread, and nothing else. With the
+    # windows permuted over both conditions, unequal spread would make 12 % of p values small.
     rng = np.random.default_rng(2)
-    p = [
-        window_relation(*related(rng, 0), CONDITION, NUMBER, seed=k, n_permutations=199).p
-        for k in range(400)
-    ]
+    few = np.arange(60) < 10
+    condition = np.where(few, "few", "many")
+    p = []
+    for seed in range(400):
+        alpha, amplitude = rng.normal(size=(2, 60)) * np.where(few, 10, 1) + 30 * few
+        found = window_relation(alpha, amplitude, condition, NUMBER, seed, n_permutations=199)
+        p.append(found.p)
     # 0.05 is reached exactly with 199 permutations; four binomial standard errors are 0.044.
     np.testing.assert_allclose(np.mean(np.array(p) <= 0.05), 0.05, atol=0.044)
 

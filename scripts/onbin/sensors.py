@@ -15,7 +15,7 @@ GOOD, BAD = "good", "bad"
 FEWEST_TO_COMPARE, FEW_CHANNELS_FACTOR, FEWEST_FOR_MEDIAN = 8, 1.5, 3
 N_NEAREST = 5
 # Prediction from others: channels that it needs, random draws, and the share of channels in each.
-FEWEST_TO_PREDICT, N_DRAWS, DRAWN_SHARE, FEWEST_DRAWN = 20, 50, 0.25, 8
+FEWEST_TO_PREDICT, N_DRAWS, DRAWN_SHARE, FEWEST_DRAWN = 12, 50, 0.25, 8
 # Correlations are taken from at most so many windows, spread evenly: bounded time and memory.
 MOST_WINDOWS = 600
 SLOW_BAND_HZ, NOISE_BAND_HZ = (1.0, 30.0), (30.0, 45.0)
@@ -60,8 +60,8 @@ class SensorLimits:
     noise_z: float = 5.0
     noise_ratio: float = 6.0
     noise_whiteness: float = 0.4
-    correlation: float = 0.4
-    uncorrelated_share: float = 0.4
+    correlation: float = 0.3
+    uncorrelated_share: float = 0.5
     prediction: float = 0.4
     unpredicted_share: float = 0.6
 
@@ -148,12 +148,14 @@ def judge_channels(
 
     many = trusted().size >= FEWEST_TO_COMPARE
     widened = 1.0 if many else FEW_CHANNELS_FACTOR
-    common_uv = np.median(data_uv[trusted()], axis=0) if many else 0.0
-    slow_uv, rate_hz, noise_uv, found["noise_whiteness"] = _bands(data_uv, common_uv, sfreq_hz)
+    # The median channel is a common reference that no single channel can spoil.
+    compared_uv = data_uv - np.median(data_uv[trusted()], axis=0) if many else data_uv
     if trusted().size >= FEWEST_FOR_MEDIAN:
-        away, ratio = _against_others(_robust_amplitude(slow_uv), trusted(), positions_m)
-        noise_away, noise_ratio = _against_others(noise_uv, trusted(), positions_m)
+        slow_level, noise_level = _levels(compared_uv, sfreq_hz)
+        away, ratio = _against_others(slow_level, trusted(), positions_m)
+        noise_away, noise_ratio = _against_others(noise_level, trusted(), positions_m)
         found["deviation_ratio"], found["noise_ratio"] = np.maximum(ratio, 1 / ratio), noise_ratio
+        found["noise_whiteness"] = (noise_level / np.maximum(slow_level, 1e-12)) ** 2
         deviating = found["deviation_ratio"] > limits.deviation_ratio * widened
         noisy = noise_ratio > limits.noise_ratio * widened
         noisy &= found["noise_whiteness"] > limits.noise_whiteness
@@ -163,6 +165,7 @@ def judge_channels(
             noisy &= noise_away > limits.noise_z
         reasons["high-frequency noise"] = ~flat & noisy
         reasons["deviating amplitude"] = ~flat & deviating & ~noisy
+    slow_uv, rate_hz = _slow_signal(compared_uv, sfreq_hz)
     if trusted().size >= FEWEST_TO_COMPARE:
         correlations = _partner_correlation(slow_uv, rate_hz, trusted())
         found["uncorrelated_share"] = (correlations < limits.correlation).mean(axis=0)
@@ -278,27 +281,29 @@ def _pops_per_min(data_uv: np.ndarray, sfreq_hz: float, pop_uv: float) -> np.nda
     return np.array(rates) / (data_uv.shape[1] / sfreq_hz / 60)
 
 
-def _bands(
-    data_uv: np.ndarray, common_uv: np.ndarray | float, sfreq_hz: float
-) -> tuple[np.ndarray, float, np.ndarray, np.ndarray]:
-    """Slow signal and its rate, robust amplitude in the noise band, and whiteness."""
-    from scipy.signal import welch
-
+def _slow_signal(data_uv: np.ndarray, sfreq_hz: float) -> tuple[np.ndarray, float]:
+    """The signal low-passed at the end of the slow band, at a rate just enough, and that rate."""
     taps = design_lowpass(sfreq_hz, min(SLOW_BAND_HZ[1], 0.4 * sfreq_hz)).taps
     step = max(int(sfreq_hz // 80), 1)
+    return np.stack([apply_fir(row, taps)[::step] for row in data_uv]), sfreq_hz / step
+
+
+def _levels(data_uv: np.ndarray, sfreq_hz: float) -> tuple[np.ndarray, np.ndarray]:
+    """Typical amplitude density in the slow and in the noise band, µV/√Hz.
+
+    Medians over time and over the band's bins: neither a burst nor a blink, neither alpha nor a
+    tag or the line decides.
+    """
+    from scipy.signal import welch
+
     n_window = min(round(2 * sfreq_hz), data_uv.shape[1])
-    slow_uv, noise_uv, whiteness = [], [], []
-    for row in data_uv:
-        signal = row - common_uv
-        slow_uv.append(apply_fir(signal, taps)[::step])
-        frequency_hz, density = welch(signal, sfreq_hz, nperseg=n_window, average="median")
-        slow = (frequency_hz >= SLOW_BAND_HZ[0]) & (frequency_hz <= SLOW_BAND_HZ[1])
-        noise = (frequency_hz > NOISE_BAND_HZ[0]) & (frequency_hz <= NOISE_BAND_HZ[1])
-        # Medians over time and over bins: neither a burst nor a tag or the line is noise.
-        level = np.median(density[noise]) if noise.any() else 0.0
-        noise_uv.append(np.sqrt(level * (NOISE_BAND_HZ[1] - NOISE_BAND_HZ[0])))
-        whiteness.append(level / max(np.median(density[slow]), 1e-30))
-    return np.stack(slow_uv), sfreq_hz / step, np.array(noise_uv), np.array(whiteness)
+    levels = np.zeros((2, len(data_uv)))
+    for channel, row in enumerate(data_uv):
+        frequency_hz, density = welch(row, sfreq_hz, nperseg=n_window, average="median")
+        for level, (low_hz, high_hz) in zip(levels, (SLOW_BAND_HZ, NOISE_BAND_HZ), strict=True):
+            band = (frequency_hz >= low_hz) & (frequency_hz <= high_hz)
+            level[channel] = np.sqrt(np.median(density[band])) if band.any() else 0.0
+    return levels[0], levels[1]
 
 
 def _windows(signal: np.ndarray, n_window: int, most: int) -> Iterator[np.ndarray]:
