@@ -317,12 +317,14 @@ def test_bootstrap_interval_of_too_little_is_undefined(values):
 
 
 def test_bootstrap_interval_where_resamples_are_undefined():
-    # Four pairs: some resamples repeat one pair, and have no correlation.
+    # Five pairs: some resamples repeat one pair, and have no correlation.
     x, y = np.array([1.0, 2, 3, 4, 5]), np.array([2.0, 1, 4, 3, 6])
     found = inference.bca_interval(inference.spearman, x, y, seed=0)
     assert -1 <= found.low < 0.8 < found.high <= 1
     undefined = inference.bca_interval(inference.spearman, x, np.ones(5), seed=0)
     assert np.isnan(undefined.low)
+    with pytest.raises(DataError, match=r"found \[5, 4\] values"):
+        inference.bca_interval(inference.spearman, x, y[:4], seed=0)
 
 
 # Effect sizes

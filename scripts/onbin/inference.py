@@ -401,6 +401,11 @@ def bca_interval(
         nan for a sample of one or none, for constant samples, and where the statistic itself or one
         with a value left out is undefined. Resamples on which it is undefined are left out.
 
+    Raises
+    ------
+    DataError
+        Missing values, or paired samples of unequal length.
+
     Notes
     -----
     Efron 1987, J Am Stat Assoc 82:171; for several samples Efron & Tibshirani 1993 (from memory).
@@ -410,6 +415,9 @@ def bca_interval(
 
     samples = [_finite(sample) for sample in samples]
     undefined = Interval(np.nan, np.nan)
+    if paired and len({sample.size for sample in samples}) > 1:
+        found = [sample.size for sample in samples]
+        raise DataError(f"Paired samples must have one value each a person, found {found} values.")
     if min(sample.size for sample in samples) < 2 or all(map(_is_constant, samples)):
         return undefined
     rng = np.random.default_rng(seed)

@@ -51,6 +51,13 @@ def f_survival(statistic: np.ndarray, numerator: float, denominator: float) -> n
     return fdtrc(numerator, denominator, statistic)
 
 
+def chi2_survival(statistic: np.ndarray, degrees_of_freedom: float) -> np.ndarray:
+    """Probability of a larger value of χ²."""
+    from scipy.special import chdtrc
+
+    return chdtrc(degrees_of_freedom, np.maximum(statistic, 0))
+
+
 def snr_p(snr: np.ndarray, bins: int, windows: int = 1) -> np.ndarray:
     """Probability of an SNR at least this large where there is no response.
 

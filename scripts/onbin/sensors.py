@@ -34,7 +34,7 @@ class SensorLimits:
     dropout_share : float
         Largest share of samples that stand still elsewhere, for 50 ms or longer.
     pops_per_min : float
-        Most lasting jumps a minute that few other channels share.
+        Most lasting jumps a minute that hardly another channel shares.
     pop_uv : float
         Smallest step that is a jump.
     deviation_z, deviation_ratio : float
@@ -83,11 +83,15 @@ class ChannelVerdict:
 
 @dataclass(frozen=True)
 class Referenced:
-    """An interpolated and referenced recording, and what became of its bad channels."""
+    """An interpolated and referenced recording, and what became of its bad channels.
 
-    raw: object
+    `rank` counts what is left to unmix: each interpolated channel and a reference take one away.
+    """
+
+    raw: "mne.io.BaseRaw"  # noqa: F821
     interpolated: tuple[str, ...]
     left_out: dict[str, str]
+    rank: int
 
 
 def judge_channels(
@@ -129,77 +133,84 @@ def judge_channels(
     The criteria are those of Bigdely-Shamlo et al. 2015 in kind (from memory), with medians over
     time throughout, so that blinks and bursts of muscle or alpha do not count against a channel.
     """
-    recorded_uv = data_uv if recorded_uv is None else recorded_uv
-    n_channels = len(names)
-    found: dict[str, np.ndarray] = {}
+    if recorded_uv is None:
+        recorded_uv = data_uv
+    figures: dict[str, np.ndarray] = {}
     reasons: dict[str, np.ndarray] = {}
-
-    found["flat_uv"] = _robust_amplitude(data_uv)
-    flat = found["flat_uv"] < limits.flat_uv
-    found["saturated_share"], found["dropout_share"] = _still_shares(recorded_uv, sfreq_hz)
-    found["pops_per_min"] = _pops_per_min(recorded_uv, sfreq_hz, limits.pop_uv)
-    reasons["flat"] = flat
-    reasons["saturated"] = ~flat & (found["saturated_share"] > limits.saturated_share)
-    reasons["drop-outs"] = ~flat & (found["dropout_share"] > limits.dropout_share)
-    reasons["jumps"] = ~flat & (found["pops_per_min"] > limits.pops_per_min)
 
     def trusted() -> np.ndarray:
         return np.flatnonzero(~np.any(list(reasons.values()), axis=0))
 
+    figures["flat_uv"] = _robust_amplitude(data_uv)
+    figures["saturated_share"], figures["dropout_share"] = _still_shares(recorded_uv, sfreq_hz)
+    figures["pops_per_min"] = _pops_per_min(recorded_uv, sfreq_hz, limits.pop_uv)
+    flat = figures["flat_uv"] < limits.flat_uv
+    reasons["flat"] = flat
+    reasons["saturated"] = figures["saturated_share"] > limits.saturated_share
+    reasons["drop-outs"] = figures["dropout_share"] > limits.dropout_share
+    reasons["jumps"] = figures["pops_per_min"] > limits.pops_per_min
+
     many = trusted().size >= FEWEST_TO_COMPARE
     widened = 1.0 if many else FEW_CHANNELS_FACTOR
     # The median channel is a common reference that no single channel can spoil.
-    compared_uv = data_uv - np.median(data_uv[trusted()], axis=0) if many else data_uv
+    common_uv = _median_channel(data_uv, trusted()) if many else np.zeros(data_uv.shape[1])
     if trusted().size >= FEWEST_FOR_MEDIAN:
-        slow_level, noise_level = _levels(compared_uv, sfreq_hz)
-        away, ratio = _against_others(slow_level, trusted(), positions_m)
-        noise_away, noise_ratio = _against_others(noise_level, trusted(), positions_m)
-        found["deviation_ratio"], found["noise_ratio"] = np.maximum(ratio, 1 / ratio), noise_ratio
-        found["noise_whiteness"] = (noise_level / np.maximum(slow_level, 1e-12)) ** 2
-        deviating = found["deviation_ratio"] > limits.deviation_ratio * widened
-        noisy = noise_ratio > limits.noise_ratio * widened
-        noisy &= found["noise_whiteness"] > limits.noise_whiteness
-        if many:
-            found["deviation_z"], found["noise_z"] = away, noise_away
-            deviating &= np.abs(away) > limits.deviation_z
-            noisy &= noise_away > limits.noise_z
-        reasons["high-frequency noise"] = ~flat & noisy
-        reasons["deviating amplitude"] = ~flat & deviating & ~noisy
-    slow_uv, rate_hz = _slow_signal(compared_uv, sfreq_hz)
-    if trusted().size >= FEWEST_TO_COMPARE:
-        correlations = _partner_correlation(slow_uv, rate_hz, trusted())
-        found["uncorrelated_share"] = (correlations < limits.correlation).mean(axis=0)
-        reasons["uncorrelated"] = ~flat & (found["uncorrelated_share"] > limits.uncorrelated_share)
-    placed = np.isfinite(positions_m).all(axis=1)
-    sources = trusted()[placed[trusted()]]
-    if sources.size >= FEWEST_TO_PREDICT:
-        share = np.full(n_channels, np.nan)
-        predictions = _prediction_correlation(
-            slow_uv[placed],
-            rate_hz,
-            positions_m[placed],
-            np.flatnonzero(np.isin(np.flatnonzero(placed), sources)),
-            np.random.default_rng(seed),
+        slow_level, noise_level = _levels(data_uv, common_uv, sfreq_hz)
+        deviation_z, ratio = _against_others(slow_level, trusted(), positions_m)
+        noise_z, noise_ratio = _against_others(noise_level, trusted(), positions_m)
+        figures["deviation_ratio"], figures["noise_ratio"] = (
+            np.maximum(ratio, 1 / ratio),
+            noise_ratio,
         )
-        share[placed] = (predictions < limits.prediction).mean(axis=0)
-        found["unpredicted_share"] = share
-        reasons["unpredicted"] = ~flat & (share > limits.unpredicted_share)
+        figures["noise_whiteness"] = (noise_level / np.maximum(slow_level, 1e-12)) ** 2
+        deviating = figures["deviation_ratio"] > limits.deviation_ratio * widened
+        noisy = noise_ratio > limits.noise_ratio * widened
+        noisy &= figures["noise_whiteness"] > limits.noise_whiteness
+        if many:
+            figures["deviation_z"], figures["noise_z"] = deviation_z, noise_z
+            deviating &= np.abs(deviation_z) > limits.deviation_z
+            noisy &= noise_z > limits.noise_z
+        reasons["high-frequency noise"] = noisy
+        reasons["deviating amplitude"] = deviating & ~noisy
+    if trusted().size >= FEWEST_TO_COMPARE:
+        slow_uv, rate_hz = _slow_signal(data_uv, common_uv, sfreq_hz)
+        correlations = _partner_correlation(slow_uv, rate_hz, trusted())
+        figures["uncorrelated_share"] = (correlations < limits.correlation).mean(axis=0)
+        reasons["uncorrelated"] = figures["uncorrelated_share"] > limits.uncorrelated_share
+        placed = np.isfinite(positions_m).all(axis=1)
+        predictors = trusted()[placed[trusted()]]
+        if predictors.size >= FEWEST_TO_PREDICT:
+            share = np.full(len(names), np.nan)
+            share[placed] = (
+                _prediction_correlation(slow_uv, rate_hz, positions_m, placed, predictors, seed)
+                < limits.prediction
+            ).mean(axis=0)
+            figures["unpredicted_share"] = share
+            reasons["unpredicted"] = share > limits.unpredicted_share
 
     limited = {
-        name: float(getattr(limits, name) * (widened if name.endswith("_ratio") else 1.0))
+        name: getattr(limits, name) * (widened if name.endswith("_ratio") else 1.0)
         for name in SensorLimits.__dataclass_fields__
         if name not in ("pop_uv", "correlation", "prediction")
     }
+    not_had = np.full(len(names), np.nan)
     verdicts = []
     for index, name in enumerate(names):
-        figures = {
-            key: float(found[key][index])
-            if np.isfinite(found.get(key, [np.nan] * n_channels)[index])
-            else None
-            for key in limited
-        }
-        why = tuple(reason for reason, is_bad in reasons.items() if is_bad[index])
-        verdicts.append(ChannelVerdict(name, BAD if why else GOOD, why, figures, limited))
+        values = {key: float(figures.get(key, not_had)[index]) for key in limited}
+        # A flat channel is that and nothing else.
+        why = [reason for reason, holds in reasons.items() if holds[index]]
+        why = ["flat"] if flat[index] else why
+        verdicts.append(
+            ChannelVerdict(
+                channel=name,
+                verdict=BAD if why else GOOD,
+                reasons=tuple(why),
+                figures={
+                    key: value if np.isfinite(value) else None for key, value in values.items()
+                },
+                limits=limited,
+            )
+        )
     return verdicts
 
 
@@ -254,41 +265,50 @@ def _still_shares(data_uv: np.ndarray, sfreq_hz: float) -> tuple[np.ndarray, np.
 
 
 def _pops_per_min(data_uv: np.ndarray, sfreq_hz: float, pop_uv: float) -> np.ndarray:
-    """Rate of jumps within 20 ms that last 100 ms and that few channels share."""
+    """Rate of jumps within 20 ms that last 100 ms and that hardly another channel shares.
+
+    A channel shares a jump that is half as large in it: gaze and a loose reference are no
+    channel's fault.
+    """
     lag, around = max(round(0.02 * sfreq_hz), 1), max(round(0.1 * sfreq_hz), 1)
-    jumps = []
-    for row in data_uv:
-        steps = np.abs(row[lag:] - row[:-lag])
-        limit = max(pop_uv, 10 * np.median(steps) / 0.6745)
-        candidates = np.flatnonzero(steps > limit)
+    fewest_sharing = 2 if len(data_uv) >= FEWEST_TO_COMPARE else 1
+    pops = np.zeros(len(data_uv))
+    for channel, row in enumerate(data_uv):
+        steps_uv = np.abs(row[lag:] - row[:-lag])
+        limit_uv = max(pop_uv, 10 * np.median(steps_uv) / 0.6745)
+        candidates = np.flatnonzero(steps_uv > limit_uv)
         groups = np.split(candidates, np.flatnonzero(np.diff(candidates) > around) + 1)
-        found = []
-        for group in groups:
-            if group.size == 0 or group[0] < around or group[-1] + lag + around > row.size:
-                continue
-            before = np.median(row[group[0] - around : group[0]])
-            after = np.median(row[group[-1] + lag : group[-1] + lag + around])
-            if abs(after - before) > pop_uv:
-                found.append(group[0])
-        jumps.append(np.array(found, dtype=int))
-    everywhere = np.sort(np.concatenate(jumps))
-    most_shared = max(len(data_uv) // 4, 1)
-    rates = []
-    for found in jumps:
-        first = np.searchsorted(everywhere, found - around)
-        last = np.searchsorted(everywhere, found + around, side="right")
-        rates.append(np.sum(last - first <= most_shared))
-    return np.array(rates) / (data_uv.shape[1] / sfreq_hz / 60)
+        for group in groups if candidates.size else []:
+            first, last = group[0], group[-1] + lag
+            before = np.median(data_uv[:, max(first - around, 0) : first + 1], axis=1)
+            after = np.median(data_uv[:, last : last + around], axis=1)
+            shifts_uv = np.abs(after - before)
+            sharing = np.sum(shifts_uv > pop_uv / 2) - 1
+            pops[channel] += shifts_uv[channel] > pop_uv and sharing < fewest_sharing
+    return pops / (data_uv.shape[1] / sfreq_hz / 60)
 
 
-def _slow_signal(data_uv: np.ndarray, sfreq_hz: float) -> tuple[np.ndarray, float]:
+def _median_channel(data_uv: np.ndarray, channels: np.ndarray) -> np.ndarray:
+    """Median over channels, sample by sample, in blocks."""
+    blocks = range(0, data_uv.shape[1], 100_000)
+    return np.concatenate(
+        [np.median(data_uv[channels, start : start + 100_000], axis=0) for start in blocks]
+    )
+
+
+def _slow_signal(
+    data_uv: np.ndarray, common_uv: np.ndarray, sfreq_hz: float
+) -> tuple[np.ndarray, float]:
     """The signal low-passed at the end of the slow band, at a rate just enough, and that rate."""
     taps = design_lowpass(sfreq_hz, min(SLOW_BAND_HZ[1], 0.4 * sfreq_hz)).taps
     step = max(int(sfreq_hz // 80), 1)
-    return np.stack([apply_fir(row, taps)[::step] for row in data_uv]), sfreq_hz / step
+    slow_uv = np.stack([apply_fir(row - common_uv, taps)[::step] for row in data_uv])
+    return slow_uv, sfreq_hz / step
 
 
-def _levels(data_uv: np.ndarray, sfreq_hz: float) -> tuple[np.ndarray, np.ndarray]:
+def _levels(
+    data_uv: np.ndarray, common_uv: np.ndarray, sfreq_hz: float
+) -> tuple[np.ndarray, np.ndarray]:
     """Typical amplitude density in the slow and in the noise band, µV/√Hz.
 
     Medians over time and over the band's bins: neither a burst nor a blink, neither alpha nor a
@@ -299,7 +319,7 @@ def _levels(data_uv: np.ndarray, sfreq_hz: float) -> tuple[np.ndarray, np.ndarra
     n_window = min(round(2 * sfreq_hz), data_uv.shape[1])
     levels = np.zeros((2, len(data_uv)))
     for channel, row in enumerate(data_uv):
-        frequency_hz, density = welch(row, sfreq_hz, nperseg=n_window, average="median")
+        frequency_hz, density = welch(row - common_uv, sfreq_hz, nperseg=n_window, average="median")
         for level, (low_hz, high_hz) in zip(levels, (SLOW_BAND_HZ, NOISE_BAND_HZ), strict=True):
             band = (frequency_hz >= low_hz) & (frequency_hz <= high_hz)
             level[channel] = np.sqrt(np.median(density[band])) if band.any() else 0.0
@@ -335,40 +355,65 @@ def _prediction_correlation(
     slow_uv: np.ndarray,
     rate_hz: float,
     positions_m: np.ndarray,
-    trusted: np.ndarray,
-    rng: np.random.Generator,
+    placed: np.ndarray,
+    predictors: np.ndarray,
+    seed: int,
 ) -> np.ndarray:
-    """Correlation with the median of predictions by random draws, (n_windows, n_channels)."""
-    n_drawn = max(round(DRAWN_SHARE * trusted.size), FEWEST_DRAWN)
-    draws = [np.sort(rng.choice(trusted, n_drawn, replace=False)) for _ in range(N_DRAWS)]
-    weights = [spline_weights(positions_m[drawn], positions_m) for drawn in draws]
+    """Correlation of the placed channels with the median of their predictions by random draws.
+
+    Shape (n_windows, n_placed).
+    """
+    rng = np.random.default_rng(seed)
+    n_drawn = max(round(DRAWN_SHARE * predictors.size), FEWEST_DRAWN)
+    centred_m = positions_m - sphere_centre(positions_m[placed])
+    draws, weights = [], []
+    for _ in range(N_DRAWS):
+        drawn = np.sort(rng.choice(predictors, n_drawn, replace=False))
+        draws.append(drawn)
+        weights.append(spline_weights(centred_m[drawn], centred_m[placed]))
+    # Which draws a channel may be predicted from: those without itself.
+    allowed = [
+        [draw for draw, drawn in enumerate(draws) if channel not in drawn]
+        for channel in np.flatnonzero(placed)
+    ]
     correlations = []
     for window in _windows(slow_uv, round(4 * rate_hz), MOST_WINDOWS // 4):
-        predicted = np.empty((N_DRAWS, *window.shape))
-        for draw, (drawn, weight) in enumerate(zip(draws, weights, strict=True)):
-            predicted[draw] = weight @ window[drawn]
-            predicted[draw, drawn] = np.nan  # no channel predicts itself
+        predicted = np.array(
+            [weight @ window[drawn] for weight, drawn in zip(weights, draws, strict=True)]
+        )
         row = []
-        for channel, signal in enumerate(window):
-            of_channel = predicted[:, channel]
-            of_channel = of_channel[np.isfinite(of_channel[:, 0])]
-            middle = np.median(of_channel, axis=0)
-            size = np.std(signal) * np.std(middle)
+        for channel, signal in enumerate(window[placed]):
+            middle = np.median(predicted[allowed[channel], channel], axis=0)
             product = np.mean((signal - signal.mean()) * (middle - middle.mean()))
-            row.append(product / max(size, 1e-12))
+            row.append(product / max(np.std(signal) * np.std(middle), 1e-12))
         correlations.append(row)
     return np.array(correlations)
+
+
+def sphere_centre(positions_m: np.ndarray) -> np.ndarray:
+    """Centre of the sphere that fits the positions by least squares, shape (3,).
+
+    Where they do not fix a head-sized sphere it is 4 cm above the ears, (0, 0, 0.04) in head
+    coordinates (common practice).
+    """
+    usual_m = np.array([0.0, 0.0, 0.04])
+    if len(positions_m) < FEWEST_TO_COMPARE:
+        return usual_m
+    system = np.column_stack([2 * positions_m, np.ones(len(positions_m))])
+    solution, _, rank, _ = np.linalg.lstsq(system, (positions_m**2).sum(axis=1), rcond=None)
+    radius_m = np.sqrt(max(solution[3] + solution[:3] @ solution[:3], 0.0))
+    return solution[:3] if rank == 4 and 0.05 < radius_m < 0.15 else usual_m
 
 
 def spline_weights(from_m: np.ndarray, to_m: np.ndarray) -> np.ndarray:
     """Weights that predict potentials at `to_m` from those at `from_m` by spherical splines.
 
-    Splines of order 4 with a constant (Perrin et al. 1989), positions taken from the origin.
+    Splines of order 4 with a constant (Perrin et al. 1989).
 
     Parameters
     ----------
     from_m, to_m : ndarray, shape (n_from, 3) and (n_to, 3)
-        Positions.
+        Positions, seen from the centre of the sphere.
 
     Returns
     -------
@@ -397,7 +442,7 @@ def interpolate_and_reference(
     Parameters
     ----------
     raw : mne.io.Raw
-        EEG channels only; it is not changed.
+        It is not changed. Channels that are not EEG are left as they are.
     bad : sequence of str
         Channels to interpolate. One without a position is left out instead.
     reference : "average", sequence of str or None
@@ -413,35 +458,43 @@ def interpolate_and_reference(
         When no channel is left to interpolate from, or the reference cannot be used.
     """
     raw = raw.copy()
-    placed = {
-        channel["ch_name"]
-        for channel in raw.info["chs"]
-        if np.isfinite(channel["loc"][:3]).all() and np.any(channel["loc"][:3])
+    kinds = raw.get_channel_types()
+    locations_m = {
+        channel["ch_name"]: channel["loc"][:3]
+        for channel, kind in zip(raw.info["chs"], kinds, strict=True)
+        if kind == "eeg"
     }
-    bad = [name for name in raw.ch_names if name in set(bad)]
-    left_out = {name: "bad, and without a position" for name in bad if name not in placed}
+    placed = {
+        name: location_m
+        for name, location_m in locations_m.items()
+        if np.isfinite(location_m).all() and location_m.any()
+    }
+    bad = [name for name in locations_m if name in set(bad)]
     interpolated = tuple(name for name in bad if name in placed)
-    sources = placed - set(bad)
-    if interpolated and len(sources) < FEWEST_FOR_MEDIAN:
+    left_out = {name: "bad, and without a position" for name in bad if name not in placed}
+    n_sources = len(set(placed) - set(bad))
+    if len(bad) == len(locations_m) or (interpolated and n_sources < FEWEST_FOR_MEDIAN):
         raise DataError(
-            f"{len(bad)} of {len(raw.ch_names)} channels are bad ({', '.join(bad)}) and "
-            f"{len(sources)} good ones with positions are left to interpolate from; at least "
+            f"{len(bad)} of {len(locations_m)} channels are bad ({', '.join(bad)}), and "
+            f"{n_sources} good ones with positions are left to interpolate from; at least "
             f"{FEWEST_FOR_MEDIAN} are needed: look at the limits for channels, or leave the "
             "recording out."
         )
-    if len(left_out) == len(raw.ch_names):
-        raise DataError("All channels are bad and none has a position: leave the recording out.")
     raw.drop_channels(list(left_out))
     raw.info["bads"] = list(interpolated)
     if interpolated:
-        raw.interpolate_bads(mode="accurate", method={"eeg": "spline"}, verbose="error")
-    if reference is not None:
-        names = raw.ch_names if reference == "average" else list(reference)
-        unusable = [name for name in names if name not in raw.ch_names or name in interpolated]
-        if reference != "average" and unusable:
+        origin_m = tuple(sphere_centre(np.array(list(placed.values()))))
+        raw.interpolate_bads(origin=origin_m, method={"eeg": "spline"}, verbose="error")
+    if reference is not None and reference != "average":
+        reference = list(reference)
+        good = [name for name in locations_m if name not in bad]
+        unusable = [name for name in reference if name not in good]
+        if unusable:
             raise DataError(
-                f"The reference channel {', '.join(unusable)} is not among the good channels "
-                f"({', '.join(raw.ch_names)}): choose another reference, or leave the recording out."
+                f"The reference {', '.join(unusable)} is not among the good channels "
+                f"({', '.join(good)}): choose another reference, or leave the recording out."
             )
-        raw.set_eeg_reference(reference if reference == "average" else names, verbose="error")
-    return Referenced(raw, interpolated, left_out)
+    if reference is not None:
+        raw.set_eeg_reference(reference, verbose="error")
+    rank = len(locations_m) - len(bad) - (reference is not None)
+    return Referenced(raw, interpolated, left_out, rank)

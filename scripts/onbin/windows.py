@@ -275,7 +275,7 @@ def cleaning_matrix(
     Parameters
     ----------
     raw : mne.io.Raw
-        The recording before interpolation; only its channels and their positions are used.
+        The recording before interpolation; only its EEG channels and their positions are used.
     bad : sequence of str
         Interpolated channels.
     reference : "average", list of str or None
@@ -297,7 +297,8 @@ def cleaning_matrix(
     from onbin.components import removal_matrix
     from onbin.sensors import interpolate_and_reference
 
-    impulses = mne.io.RawArray(np.eye(len(raw.ch_names)), raw.info.copy(), verbose="error")
+    info = mne.pick_info(raw.info, mne.pick_types(raw.info, eeg=True, exclude=[]))
+    impulses = mne.io.RawArray(np.eye(len(info.ch_names)), info, verbose="error")
     cleaned = interpolate_and_reference(impulses, bad, reference).raw
     matrix = cleaned.get_data()
     if ica is not None and len(removed):

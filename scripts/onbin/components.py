@@ -1,0 +1,410 @@
+"""Independent components: fit, labels, how much of a tag each carries, verdicts, removal."""
+
+import warnings
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from onbin.filtering import apply_fir, decimate, design_highpass
+
+REMOVED, KEPT = "removed", "kept"
+# The classes of ICLabel in its order (Pion-Tonachini et al. 2019), in plain words.
+CLASSES = ("brain", "muscle", "eye", "heart", "line noise", "channel noise", "other")
+FIT_PARAMETERS = {
+    "picard": {"ortho": False, "extended": True},
+    "infomax": {"extended": True},
+    "fastica": {},
+}
+# With fewer channels there are too few sources to tell apart (common practice).
+FEWEST_CHANNELS = 8
+# Lowest rate that the fit is brought down to, its high-pass, and the most samples it takes.
+FIT_RATE_HZ, FIT_HIGHPASS_HZ, MOST_SAMPLES = 100.0, 1.0, 300_000
+# Stretches for leaving gross artifacts out of the fit: length, and amplitude over the median one.
+STRETCH_S, GROSS_FACTOR = 2.0, 5.0
+SAMPLES_PER_WEIGHT = 20
+LABEL_SECONDS = 600.0
+# Segments that tags are looked for in, and their neighbouring bins on each side, past Hann leakage.
+TAG_SEGMENT_S, TAG_NEIGHBOURS = 10.0, (3, 4, 5, 6, 7)
+
+
+@dataclass(frozen=True)
+class Fit:
+    """Fitted components, or None and the reason in `notes`."""
+
+    ica: "mne.preprocessing.ICA | None"  # noqa: F821
+    n_samples: int
+    notes: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class ComponentLimits:
+    """Which components go.
+
+    Attributes
+    ----------
+    remove : mapping of str to float
+        Class, and the least probability with which it is removed.
+    max_tag_share : float
+        One that carries more of any tag's power is kept and flagged.
+    correlation : float
+        A component that correlates this much with an EOG or ECG channel is of eye or heart, where
+        these classes are removed.
+    """
+
+    remove: Mapping[str, float] = field(
+        default_factory=lambda: {"eye": 0.7, "muscle": 0.8, "heart": 0.8, "channel noise": 0.9}
+    )
+    max_tag_share: float = 0.1
+    correlation: float = 0.7
+
+
+@dataclass(frozen=True)
+class ComponentVerdict:
+    """Verdict on one component, ``removed`` or ``kept``, and its evidence.
+
+    `label` is its likeliest class and `probability` that class's; both are None where nothing
+    could be labelled. `flagged` asks a person: it would go, but carries too much of a tag.
+    """
+
+    component: int
+    verdict: str
+    reason: str
+    flagged: bool
+    label: str | None
+    probability: float | None
+    variance_share: float
+    largest_tag_share: float
+
+
+def fit_components(raw, rank: int, method: str = "picard", seed: int = 0) -> Fit:
+    """Fit an ICA to the EEG channels on a 1 Hz high-passed copy at a reduced rate.
+
+    Parameters
+    ----------
+    raw : mne.io.Raw
+        Filtered, interpolated and referenced recording.
+    rank : int
+        Independent channels: each interpolated one and a reference take one away.
+    method : str
+        ``picard`` (extended), ``infomax`` (extended) or ``fastica``.
+    seed : int
+        Of the first guess.
+
+    Returns
+    -------
+    Fit
+
+    Notes
+    -----
+    A high-pass of 1-2 Hz for the fit follows Winkler et al. 2015. Stretches with gross artifacts
+    stay out; a long recording is thinned out evenly.
+    """
+    import mne
+
+    picks = mne.pick_types(raw.info, eeg=True, exclude=[])
+    if len(picks) < FEWEST_CHANNELS:
+        reason = f"{len(picks)} EEG channels are too few to separate sources: no components"
+        return Fit(None, 0, (reason,))
+    step = max(int(raw.info["sfreq"] // FIT_RATE_HZ), 1)
+    rate_hz = raw.info["sfreq"] / step
+    slow_uv = decimate(
+        lambda start, stop: raw.get_data(picks, start, stop) * 1e6,
+        raw.n_times,
+        raw.info["sfreq"],
+        step,
+    )
+    taps = design_highpass(rate_hz, FIT_HIGHPASS_HZ).taps
+    for channel, row in enumerate(slow_uv):
+        slow_uv[channel] = apply_fir(row, taps)
+    slow_uv, left_out_s = _without_gross_stretches(slow_uv, rate_hz)
+    n_samples = slow_uv.shape[1]
+
+    notes = []
+    if left_out_s:
+        notes.append(f"{left_out_s:.0f} s with gross artifacts stayed out of the fit")
+    if n_samples < SAMPLES_PER_WEIGHT * rank**2:
+        notes.append(
+            f"{n_samples} samples for {rank} components, {n_samples / rank**2:.1f} a weight: "
+            f"below {SAMPLES_PER_WEIGHT}, the components are uncertain"
+        )
+    copy = mne.io.RawArray(slow_uv * 1e-6, _info_at(raw.info, picks, rate_hz), verbose="error")
+    ica = mne.preprocessing.ICA(
+        n_components=rank,
+        method=method,
+        fit_params=FIT_PARAMETERS[method],
+        random_state=seed,
+        max_iter="auto",
+        verbose="error",
+    )
+    with warnings.catch_warnings(record=True) as caught:
+        warnings.simplefilter("always")
+        ica.fit(copy, picks="eeg", verbose="error")
+    if any("converge" in str(warning.message) for warning in caught):
+        notes.append(f"{method} had not converged after {ica.n_iter_} iterations")
+    return Fit(ica, n_samples, tuple(notes))
+
+
+def _info_at(info, picks: np.ndarray, rate_hz: float):
+    import mne
+
+    picked = mne.pick_info(info, picks)
+    with picked._unlock():
+        picked["sfreq"], picked["bads"] = rate_hz, []
+        picked["lowpass"] = min(picked["lowpass"] or rate_hz / 2, rate_hz / 2)
+    return picked
+
+
+def _without_gross_stretches(data_uv: np.ndarray, rate_hz: float) -> tuple[np.ndarray, float]:
+    """Whole stretches whose amplitude is not far above the median stretch's, thinned evenly."""
+    n_stretch = round(STRETCH_S * rate_hz)
+    n_whole = data_uv.shape[1] // n_stretch
+    if n_whole < 2:
+        return data_uv, 0.0
+    stretches = data_uv[:, : n_whole * n_stretch].reshape(len(data_uv), n_whole, n_stretch)
+    amplitude_uv = np.sqrt(np.einsum("cws,cws->w", stretches, stretches))
+    kept = np.flatnonzero(amplitude_uv <= GROSS_FACTOR * np.median(amplitude_uv))
+    left_out_s = (n_whole - kept.size) * STRETCH_S
+    most = max(MOST_SAMPLES // n_stretch, 1)
+    if kept.size > most:
+        kept = kept[np.linspace(0, kept.size - 1, most).astype(int)]
+    return stretches[:, kept].reshape(len(data_uv), -1), left_out_s
+
+
+def matrices(ica) -> tuple[np.ndarray, np.ndarray]:
+    """Maps (n_channels, n_components) and unmixing (n_components, n_channels) of a fit.
+
+    Sources are ``unmixing @ (data - mean)`` and their part in the data is ``maps @ sources``.
+    """
+    n_components = ica.n_components_
+    whitener = ica.pre_whitener_
+    pca = ica.pca_components_[:n_components]
+    maps = whitener * (pca.T @ ica.mixing_matrix_)
+    unmixing = (ica.unmixing_matrix_ @ pca) / whitener.T
+    return maps, unmixing
+
+
+def removal_matrix(ica, removed: Sequence[int]) -> np.ndarray:
+    """Matrix (n_channels, n_channels) that takes the removed components out of the channels."""
+    maps, unmixing = matrices(ica)
+    removed = list(removed)
+    return np.eye(len(maps)) - maps[:, removed] @ unmixing[removed]
+
+
+def remove_components(raw, ica, removed: Sequence[int], block_s: float = 60.0):
+    """Take components out of a copy of a recording, block by block."""
+    cleaned = raw.copy()
+    block = max(round(block_s * raw.info["sfreq"]), 1)
+    if len(removed):
+        for start in range(0, cleaned.n_times, block):
+            stop = min(start + block, cleaned.n_times)
+            ica.apply(cleaned, exclude=list(removed), start=start, stop=stop, verbose="error")
+    return cleaned
+
+
+def label_components(raw, ica) -> tuple[np.ndarray, tuple[str, ...]]:
+    """Class probabilities of each component by ICLabel.
+
+    Parameters
+    ----------
+    raw : mne.io.Raw
+        The recording at its own rate, not the reduced copy.
+    ica : mne.preprocessing.ICA
+        From `fit_components`.
+
+    Returns
+    -------
+    probabilities : ndarray, shape (n_components, 7)
+        In the order of `CLASSES`; NaN where channels have no positions.
+    notes : tuple of str
+        How the recording differs from what ICLabel was trained on (average reference, 1-100 Hz,
+        at least 250 Hz sampling, extended infomax).
+    """
+    import mne
+    from mne_icalabel.iclabel import iclabel_label_components
+
+    picks = mne.pick_channels(raw.ch_names, ica.ch_names, ordered=True)
+    locations_m = np.array([raw.info["chs"][pick]["loc"][:3] for pick in picks])
+    if not (np.isfinite(locations_m).all() and locations_m.any(axis=1).all()):
+        reason = "some channels have no position: components cannot be labelled"
+        return np.full((ica.n_components_, len(CLASSES)), np.nan), (reason,)
+    sfreq_hz = raw.info["sfreq"]
+    n_used = min(raw.n_times, round(LABEL_SECONDS * sfreq_hz))
+    start = (raw.n_times - n_used) // 2
+    data_uv = raw.get_data(picks, start, start + n_used) * 1e6
+    data_uv = apply_fir(data_uv, design_highpass(sfreq_hz, FIT_HIGHPASS_HZ).taps)
+
+    notes = []
+    if sfreq_hz < 250:
+        notes.append(f"sampled at {sfreq_hz:g} Hz, ICLabel was trained at 250 Hz and above")
+    if raw.info["lowpass"] < 100:
+        notes.append(f"low-passed at {raw.info['lowpass']:g} Hz, ICLabel was trained up to 100 Hz")
+    if np.abs(data_uv.mean(axis=0)).max() > 1e-3 * np.abs(data_uv).max():
+        notes.append("not in average reference, as ICLabel's training was")
+    if ica.method == "fastica":
+        notes.append("fitted by FastICA, ICLabel was trained on extended infomax")
+    copy = mne.io.RawArray(data_uv * 1e-6, _info_at(raw.info, picks, sfreq_hz), verbose="error")
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # the notes say the same
+        probabilities = iclabel_label_components(copy, ica, inplace=False, backend="onnx")
+    return np.asarray(probabilities, dtype=float), tuple(notes)
+
+
+def artifact_correlations(raw, ica) -> dict[str, np.ndarray]:
+    """Absolute correlation of each component with each EOG and ECG channel.
+
+    Returns
+    -------
+    dict of str to ndarray, shape (n_components,)
+        By class, ``eye`` and ``heart``: the largest over its channels; empty without any.
+    """
+    import mne
+
+    step = max(int(raw.info["sfreq"] // FIT_RATE_HZ), 1)
+    rate_hz = raw.info["sfreq"] / step
+    taps = design_highpass(rate_hz, FIT_HIGHPASS_HZ).taps
+
+    def slow(picks) -> np.ndarray:
+        data_uv = decimate(
+            lambda start, stop: raw.get_data(picks, start, stop) * 1e6,
+            raw.n_times,
+            raw.info["sfreq"],
+            step,
+        )
+        return apply_fir(data_uv, taps)
+
+    found = {}
+    sources = None
+    for label, kind in (("eye", {"eog": True}), ("heart", {"ecg": True})):
+        picks = mne.pick_types(raw.info, exclude=[], **kind)
+        if len(picks) == 0:
+            continue
+        if sources is None:
+            _, unmixing = matrices(ica)
+            sources = unmixing @ slow(mne.pick_channels(raw.ch_names, ica.ch_names, ordered=True))
+        channels = slow(picks)
+        both = np.corrcoef(np.vstack([sources, channels]))[: len(sources), len(sources) :]
+        found[label] = np.abs(both).max(axis=1)
+    return found
+
+
+def variance_shares(data_uv: np.ndarray, maps: np.ndarray, unmixing: np.ndarray) -> np.ndarray:
+    """Back-projected variance of each component, as a share of their sum, (n_components,)."""
+    sources_variance = np.einsum("ij,jk,ik->i", unmixing, np.cov(data_uv), unmixing)
+    variance = sources_variance * (maps**2).sum(axis=0)
+    return variance / variance.sum()
+
+
+def tag_shares(
+    data_uv: np.ndarray,
+    maps: np.ndarray,
+    unmixing: np.ndarray,
+    sfreq_hz: float,
+    frequencies_hz: Sequence[float],
+) -> np.ndarray:
+    """Share of each term's power that runs through each component.
+
+    A term's power in a component is what stands above the neighbouring bins, on average over
+    Hann-tapered segments of 10 s, times the component's summed squared map. What is not clearly
+    above its noise (3 standard errors) counts as nothing, so that slow, large components do not
+    seem to carry a tag.
+
+    Parameters
+    ----------
+    data_uv : ndarray, shape (n_channels, n_times)
+        Channels that the components were fitted to.
+    maps, unmixing : ndarray
+        From `matrices`.
+    sfreq_hz : float
+        Sampling rate.
+    frequencies_hz : sequence of float
+        Terms of the flicker.
+
+    Returns
+    -------
+    ndarray, shape (n_components, n_terms)
+        Columns sum to 1, or to 0 where no component shows the term.
+    """
+    n_segment = min(round(TAG_SEGMENT_S * sfreq_hz), data_uv.shape[1])
+    n_segments = data_uv.shape[1] // n_segment
+    bin_hz = sfreq_hz / n_segment
+    taper = 0.5 - 0.5 * np.cos(2 * np.pi * np.arange(n_segment) / n_segment)
+    terms_hz = np.asarray(frequencies_hz, dtype=float)
+    shares = np.zeros((maps.shape[1], terms_hz.size))
+    steps = np.array([0, *TAG_NEIGHBOURS, *(-step for step in TAG_NEIGHBOURS)])
+    for term, term_hz in enumerate(terms_hz):
+        bins_hz = term_hz + steps * bin_hz
+        away = np.abs(bins_hz[1:, None] - np.delete(terms_hz, term)) > 2 * bin_hz
+        bins_hz = bins_hz[np.concatenate([[True], away.all(axis=1) & (bins_hz[1:] > 0)])]
+        angles = 2 * np.pi * np.outer(np.arange(n_segment), bins_hz) / sfreq_hz
+        kernel = taper[:, None] * np.exp(-1j * angles)
+        power = np.zeros((maps.shape[1], bins_hz.size))
+        for index in range(n_segments):
+            segment = data_uv[:, index * n_segment : (index + 1) * n_segment]
+            power += np.abs(unmixing @ (segment @ kernel)) ** 2 / n_segments
+        noise = power[:, 1:].mean(axis=1)
+        excess = power[:, 0] - noise
+        excess[excess < 3 * noise / np.sqrt(n_segments)] = 0.0
+        projected = excess * (maps**2).sum(axis=0)
+        if projected.sum() > 0:
+            shares[:, term] = projected / projected.sum()
+    return shares
+
+
+def judge_components(
+    probabilities: np.ndarray,
+    shares: np.ndarray,
+    variance: np.ndarray,
+    limits: ComponentLimits,
+    correlations: Mapping[str, np.ndarray] | None = None,
+) -> list[ComponentVerdict]:
+    """Say which components go.
+
+    Parameters
+    ----------
+    probabilities : ndarray, shape (n_components, 7)
+        From `label_components`.
+    shares : ndarray, shape (n_components, n_terms)
+        From `tag_shares`.
+    variance : ndarray, shape (n_components,)
+        From `variance_shares`.
+    limits : ComponentLimits
+        What goes, and what protects.
+    correlations : mapping of str to ndarray, optional
+        From `artifact_correlations`.
+    """
+    verdicts = []
+    for component, chances in enumerate(probabilities):
+        labelled = bool(np.isfinite(chances).all())
+        likeliest = int(np.argmax(chances)) if labelled else None
+        why = [
+            f"{label} with probability {chances[CLASSES.index(label)]:.2f}"
+            for label, least in limits.remove.items()
+            if labelled and chances[CLASSES.index(label)] >= least
+        ]
+        why += [
+            f"correlates {values[component]:.2f} with a channel of the {label}"
+            for label, values in (correlations or {}).items()
+            if label in limits.remove and values[component] >= limits.correlation
+        ]
+        largest = float(shares[component].max(initial=0.0))
+        flagged = bool(why) and largest > limits.max_tag_share
+        if flagged:
+            reason = f"{why[0]}, but carries {largest:.0%} of a tag's power: a person decides"
+        elif why:
+            reason = "; ".join(why)
+        else:
+            reason = "no class to remove is likely enough" if labelled else "not labelled"
+        verdicts.append(
+            ComponentVerdict(
+                component=component,
+                verdict=REMOVED if why and not flagged else KEPT,
+                reason=reason,
+                flagged=flagged,
+                label=CLASSES[likeliest] if labelled else None,
+                probability=float(chances[likeliest]) if labelled else None,
+                variance_share=float(variance[component]),
+                largest_tag_share=largest,
+            )
+        )
+    return verdicts

@@ -1,0 +1,339 @@
+"""Where a flicker is, from the EEG alone: true frequency, drift, lost frames.
+
+A response lost to a wrong nominal frequency is the worst silent error of frequency tagging. The
+estimate is that of maximum likelihood for a sinusoid in white noise whose amplitude and phase are
+unknown in each stretch: the frequency of the largest summed power. Units: µV, Hz, s.
+"""
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from onbin.response import chi2_survival, f_survival
+from onbin.spectra import project
+
+AS_SET, OFFSET, CANNOT_TELL = "as set", "offset", "cannot tell"
+
+SEARCH_SHARE = 0.02  # how far from the nominal frequency is looked, as a share of it
+OVERSAMPLING = 8  # candidates for each 1/T
+MAXIMA_PER_CELL = 2  # independent chances for noise to peak within 1/T, about
+NEIGHBOURS = 10  # bins on each side of the searched range that the noise is taken from
+PRESENCE_LEVEL = 0.01  # chance that noise alone passes for a response somewhere in the range
+OFFSET_LEVEL = 0.01  # chance that a response at its place passes for an offset
+INTERVAL_SD = 2.575829  # 99 % interval of a normal estimate
+STEP_LEVEL = 0.01  # chance that one lost frame is found in a whole recording without any
+FEWEST_PIECES = 4  # pieces of a stretch that a step or a drift can be seen in
+PIECE_CYCLES = 8  # cycles in a piece, at least
+
+
+@dataclass(frozen=True)
+class Stretches:
+    """Continuous pieces of one signal during which the flicker went on.
+
+    Attributes
+    ----------
+    signals_uv : tuple of ndarray, shape (n_samples,)
+    starts_s : tuple of float
+        Where each begins in the recording.
+    rate_hz : float
+    """
+
+    signals_uv: tuple[np.ndarray, ...]
+    starts_s: tuple[float, ...]
+    rate_hz: float
+
+    @property
+    def longest_s(self) -> float:
+        """Length of the longest stretch, which bounds the resolution."""
+        return max(signal.size for signal in self.signals_uv) / self.rate_hz
+
+
+@dataclass(frozen=True)
+class Location:
+    """Where a tag's response was found.
+
+    Attributes
+    ----------
+    verdict : str
+        ``as set``, ``offset`` or ``cannot tell``.
+    frequency_hz, low_hz, high_hz : float
+        Estimate and its 99 % interval; NaN where it cannot be told.
+    snr_db : float
+        Power of the response over that of noise in the bin of one stretch, mean over stretches.
+    presence_p : float
+        Chance of so much power somewhere in the searched range without a response.
+    drift_hz_per_min, drift_low, drift_high : float
+        Change of the frequency over the recording and its 99 % interval.
+    steps : tuple of (float, float)
+        Jumps of the phase: time in the recording in s, and size in rad.
+    """
+
+    verdict: str
+    frequency_hz: float
+    low_hz: float
+    high_hz: float
+    snr_db: float
+    presence_p: float
+    drift_hz_per_min: float
+    drift_low: float
+    drift_high: float
+    steps: tuple[tuple[float, float], ...]
+
+
+def amplitude_loss_db(offset_bins: float) -> float:
+    """Amplitude that a coefficient loses when its frequency is off by so many bins, in dB.
+
+    20·log10|sin(πd)/(πd)| for a window without taper; −∞ a whole number of bins off.
+
+    Examples
+    --------
+    >>> round(amplitude_loss_db(0.15), 3)
+    -0.324
+    """
+    with np.errstate(divide="ignore"):
+        return float(20 * np.log10(abs(np.sinc(offset_bins))))
+
+
+def cramer_rao_sd_hz(
+    amplitude_uv: float, noise_sd_uv: float, lengths: Sequence[int], rate_hz: float
+) -> float:
+    """Smallest standard deviation of an unbiased frequency estimate, in Hz.
+
+    For a real sinusoid of unknown amplitude and phase in each of several stretches of white noise:
+    var(f) ≥ 1/Σ (2π)²·η·T²·N/12, η = A²/(2σ²) (Kay 1993, from memory).
+
+    Parameters
+    ----------
+    amplitude_uv, noise_sd_uv : float
+        A, and σ for each sample.
+    lengths : sequence of int
+        Samples of each stretch.
+    rate_hz : float
+    """
+    n = np.asarray(lengths, dtype=float)
+    eta = amplitude_uv**2 / (2 * noise_sd_uv**2)
+    return float(1 / np.sqrt(np.sum((2 * np.pi) ** 2 * eta * (n / rate_hz) ** 2 * n / 12)))
+
+
+def locate(stretches: Stretches, nominal_hz: float, avoid_hz: Sequence[float] = ()) -> Location:
+    """Find the frequency of a response near its nominal place.
+
+    Parameters
+    ----------
+    stretches : Stretches
+    nominal_hz : float
+    avoid_hz : sequence of float
+        Frequencies of other terms and of the mains: no noise is taken within two bins of them, and
+        the search stays nearer to the nominal frequency than to any of them.
+
+    Returns
+    -------
+    Location
+        With the verdict ``cannot tell`` where power in the range could well be noise.
+    """
+    bin_hz = 1 / stretches.longest_s
+    nearest_hz = min((abs(f - nominal_hz) for f in avoid_hz), default=np.inf)
+    reach_hz = min(SEARCH_SHARE * nominal_hz, nearest_hz / 2)
+    noise_uv2 = _noise_per_sample(stretches, nominal_hz, reach_hz, bin_hz, avoid_hz)
+    count = int(np.ceil(reach_hz / bin_hz * OVERSAMPLING))
+    grid_hz = nominal_hz + np.linspace(-reach_hz, reach_hz, 2 * count + 1)
+    power = summed_power(stretches, grid_hz, noise_uv2)
+
+    best, freedom = int(np.argmax(power)), 2 * len(stretches.signals_uv)
+    cells = max(2 * reach_hz / bin_hz, 1.0) * MAXIMA_PER_CELL
+    chance = f_survival(power[best] / freedom, freedom, freedom * 2 * NEIGHBOURS)
+    presence_p = min(1.0, cells * float(chance))
+    if presence_p > PRESENCE_LEVEL:
+        nothing = (np.nan,) * 3
+        return Location(CANNOT_TELL, *nothing, np.nan, presence_p, *nothing, ())
+
+    estimate_hz = _climb(
+        lambda f: summed_power(stretches, np.array([f]), noise_uv2)[0],
+        grid_hz[best],
+        reach_hz / count,
+    )
+    information = _information(stretches, estimate_hz, noise_uv2)
+    half_hz = INTERVAL_SD / np.sqrt(information.sum())
+    at_nominal, at_estimate = summed_power(
+        stretches, np.array([nominal_hz, estimate_hz]), noise_uv2
+    )
+    # a peak of noise may outdo a weak response: the ratio of likelihoods must stand out from all
+    ratio_p = cells * float(chi2_survival(at_estimate - at_nominal, 1))
+    inside = abs(estimate_hz - nominal_hz) <= half_hz or ratio_p > OFFSET_LEVEL
+    excess = max(power[best] / freedom - 1, np.finfo(float).tiny)
+    return Location(
+        AS_SET if inside else OFFSET,
+        estimate_hz,
+        estimate_hz - half_hz,
+        estimate_hz + half_hz,
+        float(10 * np.log10(excess)),
+        presence_p,
+        *_drift(stretches, estimate_hz, noise_uv2, reach_hz),
+        tuple(_steps(stretches, estimate_hz, noise_uv2)),
+    )
+
+
+def summed_power(stretches: Stretches, frequencies_hz: np.ndarray, noise_uv2: float) -> np.ndarray:
+    """Power at each frequency over that of noise, summed over stretches: χ² with 2 each.
+
+    Parameters
+    ----------
+    stretches : Stretches
+    frequencies_hz : ndarray, shape (n_frequencies,)
+    noise_uv2 : float
+        Variance of the noise in each sample.
+    """
+    total = np.zeros(len(frequencies_hz))
+    for signals in _by_length(stretches):
+        coefficients = np.hstack(
+            [project(signals, stretches.rate_hz, part) for part in _parts(frequencies_hz)]
+        )
+        noise_power = 4 * noise_uv2 / signals.shape[-1]
+        total += (np.abs(coefficients) ** 2).sum(axis=0) / (noise_power / 2)
+    return total
+
+
+def _parts(frequencies_hz: np.ndarray) -> list[np.ndarray]:
+    """A few frequencies at a time: an operator over a long stretch takes memory."""
+    return np.array_split(frequencies_hz, -(-len(frequencies_hz) // 32))
+
+
+def _by_length(stretches: Stretches) -> list[np.ndarray]:
+    lengths = sorted({signal.size for signal in stretches.signals_uv})
+    return [np.stack([s for s in stretches.signals_uv if s.size == n]) for n in lengths]
+
+
+def _noise_per_sample(
+    stretches: Stretches,
+    nominal_hz: float,
+    reach_hz: float,
+    bin_hz: float,
+    avoid_hz: Sequence[float],
+) -> float:
+    """Variance per sample that white noise of the same density near the tag would have, in µV²."""
+    offsets = reach_hz + bin_hz * (2 + np.arange(NEIGHBOURS))
+    beside_hz = np.concatenate([nominal_hz - offsets, nominal_hz + offsets])
+    avoid = np.asarray(avoid_hz, dtype=float)
+    free = (np.abs(beside_hz[:, None] - avoid) > 2 * bin_hz).all(axis=1)
+    beside_hz = beside_hz[free & (beside_hz > 2 * bin_hz) & (beside_hz < stretches.rate_hz / 2)]
+    variances = [
+        np.abs(project(signals, stretches.rate_hz, beside_hz)) ** 2 * signals.shape[-1] / 4
+        for signals in _by_length(stretches)
+    ]
+    return float(np.concatenate(variances).mean())
+
+
+def _climb(power, start: float, step: float) -> float:
+    """Top of a peak that lies within a step of where it was seen."""
+    from scipy.optimize import minimize_scalar
+
+    found = minimize_scalar(
+        lambda x: -power(x),
+        bounds=(start - step, start + step),
+        method="bounded",
+        options={"xatol": step * 1e-6},
+    )
+    return float(found.x)
+
+
+def _information(stretches: Stretches, frequency_hz: float, noise_uv2: float) -> np.ndarray:
+    """Fisher's information on the frequency in each stretch, by its own amplitude, in 1/Hz²."""
+    found = []
+    for signal in stretches.signals_uv:
+        amplitude2 = abs(project(signal, stretches.rate_hz, [frequency_hz])[0]) ** 2
+        amplitude2 -= 4 * noise_uv2 / signal.size  # noise's own share
+        duration_s = signal.size / stretches.rate_hz
+        found.append((2 * np.pi * duration_s) ** 2 * signal.size * amplitude2 / (24 * noise_uv2))
+    found = np.array(found)
+    return np.maximum(found, found.mean() * 1e-3)
+
+
+def _drift(
+    stretches: Stretches, frequency_hz: float, noise_uv2: float, reach_hz: float
+) -> tuple[float, float, float]:
+    """Slope of the frequency over the recording in Hz a minute, and its 99 % interval."""
+    parts = stretches if len(stretches.signals_uv) >= FEWEST_PIECES else _quartered(stretches)
+    middles_s = np.array(parts.starts_s) + [s.size / 2 / parts.rate_hz for s in parts.signals_uv]
+    information = _information(parts, frequency_hz, noise_uv2)
+    centre_s = np.average(middles_s, weights=information)
+    leverage = np.sum(information * (middles_s - centre_s) ** 2)
+    span_s = np.ptp(middles_s)
+
+    def power(slope: float) -> float:
+        total = 0.0
+        for signal, middle_s in zip(parts.signals_uv, middles_s, strict=True):
+            at_hz = frequency_hz + slope * (middle_s - centre_s)
+            total += abs(project(signal, parts.rate_hz, [at_hz])[0]) ** 2 * signal.size
+        return total
+
+    steepest = reach_hz / span_s
+    count = max(int(np.ceil(reach_hz * parts.longest_s * OVERSAMPLING / 2)), 1)
+    slopes = np.linspace(-steepest, steepest, 2 * count + 1)
+    best = slopes[int(np.argmax([power(slope) for slope in slopes]))]
+    slope = _climb(power, best, steepest / count) * 60
+    half = INTERVAL_SD / np.sqrt(leverage) * 60
+    return slope, slope - half, slope + half
+
+
+def _quartered(stretches: Stretches) -> Stretches:
+    """Each stretch in four, where there are too few to see a change over them."""
+    signals, starts_s = [], []
+    for signal, start_s in zip(stretches.signals_uv, stretches.starts_s, strict=True):
+        quarter = signal.size // FEWEST_PIECES
+        for index in range(FEWEST_PIECES):
+            signals.append(signal[index * quarter : (index + 1) * quarter])
+            starts_s.append(start_s + index * quarter / stretches.rate_hz)
+    return Stretches(tuple(signals), tuple(starts_s), stretches.rate_hz)
+
+
+def _steps(
+    stretches: Stretches, frequency_hz: float, noise_uv2: float
+) -> Iterator[tuple[float, float]]:
+    """Jumps of the phase within stretches, as lost frames make them."""
+    length = int(np.ceil(PIECE_CYCLES / frequency_hz * stretches.rate_hz))
+    pieces = [signal.size // length for signal in stretches.signals_uv]
+    places = sum(max(count - 1, 0) for count in pieces)
+    for signal, start_s, count in zip(
+        stretches.signals_uv, stretches.starts_s, pieces, strict=True
+    ):
+        if count >= FEWEST_PIECES:
+            cut = signal[: count * length].reshape(count, length)
+            times_s = np.arange(count) * length / stretches.rate_hz
+            turned = project(cut, stretches.rate_hz, [frequency_hz])[:, 0]
+            turned = turned * np.exp(-2j * np.pi * frequency_hz * times_s)
+            found = _split(turned, times_s, 4 * noise_uv2 / length, STEP_LEVEL / places)
+            yield from ((start_s + time_s, size_rad) for time_s, size_rad in found)
+
+
+def _split(
+    z: np.ndarray, times_s: np.ndarray, noise_power: float, level: float
+) -> list[tuple[float, float]]:
+    """Steps of the phase in a series of coefficients, by likelihood ratio, the largest first.
+
+    Both without and with a step the frequency may be a little off, so that a step is not taken
+    for an offset nor an offset for a step.
+    """
+    count = len(z)
+    if count < FEWEST_PIECES:
+        return []
+    span_s = times_s[-1] - times_s[0]
+    slips_hz = np.linspace(-1.5, 1.5, 61) / span_s
+    series = z * np.exp(-2j * np.pi * np.outer(slips_hz, times_s - times_s[0]))
+    before = np.cumsum(series, axis=1)[:, :-1]
+    whole = series.sum(axis=1, keepdims=True)
+    straight = (np.abs(whole) ** 2).max()
+    broken = (np.abs(before) + np.abs(whole - before)) ** 2
+    slip, place = np.unravel_index(int(np.argmax(broken)), broken.shape)
+    ratio = 2 * (broken[slip, place] - straight) / (noise_power * count)
+    if chi2_survival(ratio, 1) > level:
+        return []
+    size_rad = float(np.angle((whole[slip, 0] - before[slip, place]) / before[slip, place]))
+    place += 1
+    return sorted(
+        [
+            (float(times_s[place]), size_rad),
+            *_split(z[:place], times_s[:place], noise_power, level),
+            *_split(z[place:], times_s[place:], noise_power, level),
+        ]
+    )
