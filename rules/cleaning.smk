@@ -26,6 +26,7 @@ rule filter:
 rule sensors:
     input:
         signal=result("filter_signal"),
+        recorded=result("intake_signal"),
     output:
         **made("sensors", "signal", "verdicts"),
     log:
@@ -37,7 +38,7 @@ rule sensors:
         mem_mb=1500,
         runtime=30,
     params:
-        settings=settings_part("sensors", "seed"),
+        settings=settings_part("sensors.reference", "seed"),
         code=code("sensors"),
     message:
         "sensors: judging the channels of {wildcards.recording}"
@@ -48,6 +49,7 @@ rule sensors:
 rule components:
     input:
         signal=result("sensors_signal"),
+        sensors=result("sensors_verdicts"),
     output:
         **made("components", "ica", "verdicts"),
     log:
@@ -59,7 +61,9 @@ rule components:
         mem_mb=1500,
         runtime=60,
     params:
-        settings=settings_part("components", "filter.lowpass_hz", "terms", "seed"),
+        settings=settings_part(
+            "components", "sensors.reference", "filter.lowpass_hz", "terms", "seed"
+        ),
         code=code("components"),
     message:
         "components: separating sources of {wildcards.recording}"
@@ -69,9 +73,7 @@ rule components:
 
 rule windows:
     input:
-        filtered=result("filter_signal"),
         signal=result("sensors_signal"),
-        sensors=result("sensors_verdicts"),
         ica=result("components_ica"),
         components=result("components_verdicts"),
         trials=result("intake_trials"),
@@ -88,7 +90,6 @@ rule windows:
     params:
         settings=settings_part(
             "windows",
-            "sensors.reference",
             "filter.lowpass_hz",
             "terms",
             "conditions.*.flickering",

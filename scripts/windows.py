@@ -1,7 +1,6 @@
 """Remove components, cut trials into windows, judge each, and see that the response survived."""
 
-import mne
-from onbin import components, dataset, tables, tagging, windows
+from onbin import arrays, components, dataset, tables, tagging, windows, windows_tables
 from onbin.runner import run
 
 VERDICTS = [
@@ -13,39 +12,58 @@ GAINS = ["tag", "term", "frequency_hz", "site", "gain", "peak_gain", "topography
 
 
 def clean_and_cut(inputs, outputs, settings):
-    """Cut a recording into windows."""
-    referenced = dataset.read_signal(inputs.signal)
-    rate = tagging.exact_rate(referenced.info["sfreq"])
+    """Clean a recording and place its windows."""
+    raw = dataset.read_signal(inputs.signal)
+    rate = tagging.exact_rate(raw.info["sfreq"])
+    separated = components.Separation(**arrays.read(inputs.ica))
     removed = [
         row["component"]
         for row in tables.read_table(inputs.components)
-        if row["verdict"] == "removed"
+        if row["verdict"] == components.REMOVED
     ]
-    ica = mne.preprocessing.read_ica(inputs.ica, verbose="error") if removed else None
-    clean = components.remove_components(referenced, ica, removed) if removed else referenced
+    clean = components.remove_components(raw, separated, removed)
 
+    flickering = {name: about["flickering"] for name, about in settings["conditions"].items()}
+    chosen = settings["windows"]
+    passband_hz = tagging.passband_end(settings["filter"]["lowpass_hz"], float(rate))
+    terms = tagging.study_terms(settings["terms"], passband_hz)
+    samples = tagging.window_samples(
+        tagging.study_tags(settings["terms"]), terms, rate, chosen["length_s"]
+    )
     trials = tables.read_table(inputs.trials)
-    terms = tagging.study_terms(
-        settings["terms"], tagging.passband_end(settings["filter"]["lowpass_hz"], float(rate))
-    )
-    samples = windows.samples_by_condition(
-        {name: about["flickering"] for name, about in settings["conditions"].items()},
-        tagging.window_samples(
-            tagging.study_tags(settings["terms"]), terms, rate, settings["windows"]["length_s"]
-        ),
-        int(settings["windows"]["rest_length_s"] * rate),
-    )
-    data_uv = dataset.eeg_uv(clean)
     placed, unplaced = windows.place_windows(
-        trials, float(rate), clean.n_times, samples, settings["windows"]["skip_s"]
+        trials,
+        float(rate),
+        clean.n_times,
+        windows_tables.samples_by_condition(
+            flickering, samples, rate, chosen["length_s"], chosen["rest_length_s"]
+        ),
+        chosen["skip_s"],
     )
     verdicts = windows.judge_windows(
-        data_uv,
+        dataset.eeg_uv(clean),
         placed,
         float(rate),
-        windows.WindowLimits(peak_to_peak_uv=tuple(settings["windows"]["peak_to_peak_uv"])),
+        windows.WindowLimits(peak_to_peak_uv=tuple(chosen["peak_to_peak_uv"])),
         dataset.bad_spans(clean),
         [float(term.frequency) for term in terms],
     )
+    survival = windows_tables.survival_rows(
+        dataset.eeg_uv(raw),
+        dataset.eeg_names(raw),
+        separated.removal(removed),
+        [v.window for v in verdicts if v.verdict == windows.KEPT],
+        terms,
+        samples,
+        float(rate),
+        flickering,
+    )
+
     dataset.write_signal(clean, outputs.signal)
-    tables.write_table(outputs.verdicts, windows.verdict_rows(verdicts, unplaced), VERDICTS)
+    rows = windows_tables.verdict_rows(verdicts, unplaced, trials)
+    tables.write_table(outputs.verdicts, rows, VERDICTS)
+    tables.write_table(outputs.gains, survival, GAINS)
+
+
+if "snakemake" in globals():
+    run(clean_and_cut, snakemake)  # noqa: F821

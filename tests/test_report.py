@@ -1,7 +1,8 @@
 import base64
 import re
+from html import unescape
 from html.parser import HTMLParser
-from pathlib import Path
+from itertools import pairwise
 from types import SimpleNamespace
 
 import mne
@@ -95,9 +96,7 @@ class Study:
             people=[], channels=[], gains=[], sensors=[], components=[], windows=[], cleaning=[],
         )  # fmt: skip
         for number, who in enumerate(self.names):
-            present = [
-                name for name in settings.conditions if (lacking or {}).get(number) != name
-            ]
+            present = [name for name in settings.conditions if (lacking or {}).get(number) != name]
             self._recording(who, present, number in bad)
             self._participant(who, present)
         self._study()
@@ -145,10 +144,16 @@ class Study:
             "components",
             who,
             [
-                {"component": i, "component_class": c, "verdict": v, "reason": r}
+                {
+                    "component": i,
+                    "component_class": c,
+                    "verdict": v,
+                    "reason": r,
+                    "flagged": bool(r),
+                }
                 for i, (c, v, r) in enumerate(classes)
             ],
-            ["component", "component_class", "verdict", "reason"],
+            ["component", "component_class", "verdict", "reason", "flagged"],
         )
         self._write(
             "windows",
@@ -222,7 +227,9 @@ class Study:
         self._measures(who, present, coefficients, condition)
 
     def _measures(self, who, present, coefficients, condition):
-        paths = {name: self.folder / f"{who}_{name}.tsv" for name in ("r", "rw", "a", "aw", "l", "lw")}
+        paths = {
+            name: self.folder / f"{who}_{name}.tsv" for name in ("r", "rw", "a", "aw", "l", "lw")
+        }
         own = self.whole | {"participant": who}
         response_step.measure_response(
             SimpleNamespace(coefficients=coefficients),
@@ -236,10 +243,13 @@ class Study:
                 "participant": who, "condition": name, "site": site, "site_kind": kind,
                 "alpha_frequency_hz": self.rng.normal(10, 0.7) if found else np.nan,
                 "alpha_centre_hz": 10.0, "alpha_found": "yes" if found else "no peak",
-                "band_low_hz": 8.0, "band_high_hz": 12.0, "alpha_power_db": power_db[name],
+                "band_low_hz": 8.0, "band_high_hz": 12.0,
+                "alpha_power_db": power_db[name] + len(site) / 3 + index / 9,
             }
             for name in present
-            for site, kind in [*((c, "channel") for c in self.channels), ("occipital", "region")]
+            for index, (site, kind) in enumerate(
+                [("occipital", "region"), *((c, "channel") for c in self.channels)]
+            )
         ]  # fmt: skip
         tables.write_table(paths["a"], alpha, list(alpha[0]))
         windows = [
@@ -276,3 +286,241 @@ class Study:
         raw.set_montage("colin27_1005")
         self.inputs.signal = self.folder / "signal_eeg.fif"
         dataset.write_signal(raw, self.inputs.signal)
+
+
+class Page(HTMLParser):
+    """Checks that elements are closed in order, and collects what the tests ask about."""
+
+    VOID = ("meta", "img", "br")
+
+    def __init__(self, text):
+        super().__init__()
+        self.open, self.elements, self.text = [], [], ""
+        self.feed(text)
+        assert not self.open
+
+    def handle_starttag(self, tag, attributes):
+        self.elements.append((tag, dict(attributes)))
+        if tag not in self.VOID:
+            self.open.append(tag)
+
+    def handle_endtag(self, tag):
+        assert self.open.pop() == tag
+
+    def handle_data(self, data):
+        if self.open and self.open[-1] != "style":
+            self.text += data
+
+    @property
+    def words(self):
+        return " ".join(self.text.split())
+
+    def all(self, tag, attribute):
+        return [of[attribute] for name, of in self.elements if name == tag and attribute in of]
+
+
+@pytest.fixture(scope="module")
+def usual(tmp_path_factory):
+    """Six people: one has too many bad channels, another lacks a condition."""
+    folder = tmp_path_factory.mktemp("usual")
+    made = Study(folder, study_settings(), people=6, channels=6, bad=[3], lacking={4: "rest"})
+    return made, made.report()
+
+
+def test_page_needs_no_other_file_and_no_script(usual):
+    page = Page(usual[1])
+    assert all(source.startswith("data:image/png;base64,") for source in page.all("img", "src"))
+    assert not {"script", "link", "iframe", "object"} & {tag for tag, _ in page.elements}
+    links = page.all("a", "href")
+    ours = re.compile(r"#[a-z]+|study/[a-z/_]+\.(tsv|png)|manifest\.tsv")
+    assert all(ours.fullmatch(link) for link in links)
+    assert "url(" not in usual[1]
+    assert "@import" not in usual[1]
+
+
+def test_page_can_be_read_without_seeing_the_figures(usual):
+    page = Page(usual[1])
+    assert len(page.all("img", "alt")) == len(FIGURES)
+    assert all(len(alt) > 60 for alt in page.all("img", "alt"))
+    assert page.all("html", "lang") == ["en"]
+    headings = [int(tag[1]) for tag, _ in page.elements if re.fullmatch("h[1-6]", tag)]
+    assert headings[0] == 1
+    assert all(after - before <= 1 for before, after in pairwise(headings))
+
+
+def test_embedded_figures_are_the_files(usual):
+    made, text = usual
+    for name in FIGURES:
+        embedded = base64.b64encode((made.folder / f"{name}.png").read_bytes()).decode()
+        assert embedded in text
+
+
+def test_text_of_datasets_is_escaped(usual):
+    assert "<b>panels</b>" not in usual[1]
+    assert "Two &lt;b&gt;panels&lt;/b&gt; &amp; a lamp" in usual[1]
+    assert "tag &lt;1f&gt;" in usual[1]
+
+
+def test_answers_stand_first_and_say_who_is_missing(usual):
+    words = Page(usual[1]).words
+    assert words.index("Evoked amplitude at occipital is") < words.index("Who is in the study")
+    assert "higher for left in watch left than for left in watch right" in words
+    assert "Not in this comparison, since a value is missing: sub-05." in words
+    # sign-flip floor of 4 people 2/2^4; Holm over 2 comparisons doubles it
+    assert "With 4 people no p below 0.12 is possible" in words
+
+
+def test_nothing_is_silently_dropped(usual):
+    words = Page(usual[1]).words
+    assert "In the study (5 of 6): sub-01, sub-02, sub-03, sub-05 and sub-06." in words
+    assert "sub-04: sub-04/eeg/sub-04_task-x: 3 of 6 channels are bad, more than 25%" in words
+    assert "1 of 6: Oz (flat)" in words
+    assert "gradient 3, muscle 3" in words  # a window with two reasons counts under each
+    assert "not there" in words  # the condition that sub-05 lacks
+
+
+def test_estimates_are_those_of_the_table(usual):
+    made, text = usual
+    for row in tables.read_table(made.inputs.comparisons):
+        assert f"{report.number(abs(row['estimate']))} {row['estimate_unit']} " in Page(text).words
+
+
+def test_group_means_are_means_over_the_people_in_the_study(usual):
+    made, _ = usual
+    rows = tables.read_table(made.inputs.responses)
+    amplitudes = [
+        row["amplitude_uv"]
+        for row in rows
+        if (row["tag"], row["term"], row["condition"], row["site"])
+        == ("left", "1f", "watch_left", "occipital")
+        and row["participant"] != "sub-04"
+    ]
+    lines = report_tables.response_groups(made.material())["occipital"]
+    cell = next(x for x in lines if (x["tag"], x["term"]) == ("left", "1f"))["cells"]["watch_left"]
+    np.testing.assert_allclose(cell["amplitude_uv"], np.mean(amplitudes), rtol=1e-9)  # same floats
+    assert (cell["n"], cell["detected"]) == (5, 5)
+
+
+def test_bins_agree_with_the_table_of_responses(usual):
+    # two ways to the same number: coefficients of single precision, and the step response
+    made, _ = usual
+    material = made.material()
+    for hood in report_tables.neighbourhoods(material):
+        shown = [
+            row["amplitude_uv"]
+            for row in report_tables.response_rows(material)
+            if (row["tag"], row["condition"]) == (hood.tag, hood.condition) and row["in_study"]
+        ]
+        np.testing.assert_allclose(hood.amplitude_uv[:, 0], shown, rtol=1e-5)
+        rows = [
+            row["neighbours"]
+            for row in material.responses
+            if (row["tag"], row["term"], row["condition"]) == (hood.tag, "1f", hood.condition)
+        ]
+        assert set(rows) == {hood.used.sum()}
+
+
+def test_flicker_table_is_exact(usual):
+    plans = report_tables.flicker_plans(usual[0].material())
+    rows = {f"{row['term'].tag} {row['term'].term}": row for row in plans[0]["terms"]}
+    # 144 Hz, 8 and 10 frames; 2.5 s at 250 Hz holds 45 and 36 cycles (common practice)
+    assert [str(rows["left 1f"][k]) for k in ("cycles", "bin_hz")] == ["36", "2/5"]
+    assert rows["right 1f"]["cycles"] == 45
+    # 14.4 Hz, the other tag, is 9 bins below 18 Hz
+    assert rows["right 1f"]["left_out"][0]["frequencies"] == [rows["left 1f"]["term"].frequency]
+    assert "72/5 = 14.4" in Page(usual[1]).words
+
+
+def test_settings_on_the_page_make_the_same_study(usual, tmp_path):
+    made, text = usual
+    listing = next(part for part in re.findall(r"<pre>(.*?)</pre>", text, re.S) if "study:" in part)
+    path = tmp_path / "study.yaml"
+    path.write_text(unescape(listing), encoding="utf-8")
+    again = load_settings(path)
+    assert again == made.settings
+    assert list(again.tags) == ["right", "left"]  # f1 and f2 are counted in this order
+
+
+def test_same_in_same_out(usual):
+    made, text = usual
+    before = {name: (made.folder / f"{name}.png").read_bytes() for name in FIGURES}
+    assert made.report() == text
+    assert {name: (made.folder / f"{name}.png").read_bytes() for name in FIGURES} == before
+
+
+@pytest.mark.parametrize(
+    ("rate_hz", "risk"),
+    [
+        (2.9, "outside"),  # WCAG 2.2, 2.3.1, and Harding et al. 2005: from 3 flashes a second
+        (3, "provocative"),
+        (14.9, "provocative"),
+        (15, "most"),  # 15-25 Hz: Harding & Jeavons, Fisher et al. 2005, from memory
+        (25, "most"),
+        (25.1, "provocative"),
+        (60, "provocative"),
+        (60.1, "outside"),
+    ],
+)
+def test_caution_by_flashes_a_second(rate_hz, risk):
+    tag = tagging.exact(rate_hz)
+    light, _ = report_tables.cautions({"lamp": tag})
+    _, pattern = report_tables.cautions({"lamp": tag / 2})  # two reversals a cycle
+    assert light["risk"] == pattern["risk"] == risk
+
+
+def test_cautions_on_the_page(usual):
+    words = Page(usual[1]).words
+    assert "right: 18 flashes a second. This lies in 15–25 a second" in words
+    assert "left if it reverses a pattern: 28.8 reversals a second. This lies in 3–60" in words
+    assert "not a diagnosis" in words
+    assert "personal health data" in words
+    assert "ethics board" in words
+    assert "safe" not in words.lower()
+
+
+@pytest.mark.parametrize(
+    ("changes", "told"),
+    [
+        ({"settings": study_settings(**WITHOUT_TAGS)}, ["the settings name no flicker"]),
+        ({"people": 1}, ["too few people for an interval"]),
+        ({"people": 2, "bad": [0, 1]}, ["Nobody is in the study.", "none. Set aside (2)"]),
+        (
+            {"settings": study_settings(comparisons={}), "channels": 3},
+            ["The settings plan no comparison", "3 channels have a position, 4 are needed"],
+        ),
+    ],
+)
+def test_unusual_studies(tmp_path, changes, told):
+    made = Study(tmp_path, **({"settings": study_settings(), "people": 3, "channels": 5} | changes))
+    words = Page(made.report()).words
+    assert all(text in words for text in told)
+    assert all((tmp_path / f"{name}.png").stat().st_size > 1000 for name in FIGURES)
+
+
+def test_flicker_without_a_fixed_phase(tmp_path):
+    conditions = study_settings().model_dump()["conditions"]
+    for condition in conditions.values():
+        condition["phase_locked"] = condition["flickering"] == []
+    made = Study(tmp_path, study_settings(conditions=conditions), people=2, channels=3)
+    words = Page(made.report()).words
+    assert "In watch left and watch right the flicker does not start at a fixed phase" in words
+    row = report_tables.response_rows(made.material())[-1]
+    # a table keeps 10 digits
+    np.testing.assert_allclose(row["amplitude_uv"] ** 2, row["total_power_uv2"], rtol=1e-9)
+
+
+@pytest.mark.parametrize(
+    ("value", "text"),
+    [
+        (0.8124, "0.812"), (12.345, "12.3"), (-0.5, "−0.500"), (1234.5, "1234"), (0, "0"),
+        (0.00012345, "0.000123"), (None, "n/a"), (float("nan"), "n/a"), (9.999, "10.0"),
+    ],
+)  # fmt: skip
+def test_numbers_have_three_significant_digits(value, text):
+    assert report.number(value) == text
+
+
+def test_list_in_words():
+    assert report.listed([]) == "none"
+    assert report.listed(["a"]) == "a"
+    assert report.listed(["a", "b", "c"]) == "a, b and c"

@@ -73,7 +73,10 @@ def test_mistakes_name_their_line(tmp_path):
 @pytest.mark.parametrize(
     ("text", "expected"),
     [
-        ("study: {title: a}\nstudy: {title: b}\n", "line 2, column 1: the key 'study' stands twice"),
+        (
+            "study: {title: a}\nstudy: {title: b}\n",
+            "line 2, column 1: the key 'study' stands twice",
+        ),
         ("study:\n\ttitle: a\n", "Use spaces, not tabs"),
         ("- a\n- b\n", "holds list, not"),
         ("", "holds NoneType, not"),

@@ -93,13 +93,13 @@ def test_study_terms_stop_at_the_passband():
 def test_neighbours_leave_out_bins_that_hold_a_term():
     # bins of 0.4 Hz beside 14.4 Hz: 18 Hz is 9 bins above, 15 Hz lies between bins 1 and 2
     usable = tagging.usable_neighbours(
-        Fraction(72, 5), [-2, 1, 2, 8, 9, 10], Fraction(5, 2), [Fraction(18), Fraction(15)]
+        Fraction(72, 5), [-2, 1, 2, 8, 9, 10], Fraction(5, 2), [Fraction(18), Fraction(15)], 18.2
     )
-    assert usable == [True, False, False, True, False, True]
+    assert usable == [True, False, False, True, False, False]  # 18.4 Hz is beyond the filter
 
 
 def test_neighbours_stay_above_zero_frequency():
-    usable = tagging.usable_neighbours(Fraction(2), [-4, -3, -2], Fraction(2), [])
+    usable = tagging.usable_neighbours(Fraction(2), [-4, -3, -2], Fraction(2), [], 90.0)
     assert usable == [False, False, True]
 
 

@@ -84,10 +84,40 @@ COLUMNS = {
     ),
     "variance_share": Column("Share of the signal's variance that runs through the component."),
     "tag_share": Column("Largest share of a driven term's power that runs through it."),
-    "tag_share_term": _text("The term of that share."),
+    "flagged": Column(
+        "Whether it would be removed but carries too much of a tag: a person decides.",
+        kind="boolean",
+    ),
+    # figures of channels; limits stand in scripts/onbin/sensors.py
+    "flat_uv": Column(
+        "Of a channel its robust amplitude (interquartile range / 1.349); of a window the smallest "
+        "peak-to-peak amplitude of any channel.",
+        "µV",
+    ),
+    "saturated_share": Column("Share of samples that stand still at the channel's extreme."),
+    "dropout_share": Column("Share of samples that stand still elsewhere, for 50 ms or longer."),
+    "pops_per_min": Column("Lasting jumps a minute that hardly another channel shares.", "1/min"),
+    "deviation_z": Column("Robust z over channels of the logarithm of the amplitude."),
+    "deviation_ratio": Column("Amplitude over that of the median channel, or its inverse."),
+    "noise_z": Column("Robust z over channels of log amplitude in 30-45 Hz."),
+    "noise_ratio": Column("Amplitude in 30-45 Hz over that of the median channel."),
+    "noise_whiteness": Column("Power density in 30-45 Hz over that in 1-30 Hz."),
+    "uncorrelated_share": Column(
+        "Share of windows of 1 s in which the channel is like no other channel."
+    ),
+    "unpredicted_share": Column(
+        "Share of windows of 4 s in which it is unlike its prediction from other channels."
+    ),
+    # figures of windows
+    "peak_to_peak_uv": Column("Largest peak-to-peak amplitude of any channel.", "µV"),
+    "peak_to_peak_limit_uv": Column("Its limit: median + 5 robust sd, within the bounds.", "µV"),
+    "gradient_uv_per_ms": Column("Steepest step between samples of any channel.", "µV/ms"),
+    "gradient_limit_uv_per_ms": Column("Its limit.", "µV/ms"),
+    "muscle_uv": Column("Largest root mean square above 30 Hz of any channel.", "µV"),
+    "muscle_limit_uv": Column("Its limit.", "µV"),
     # filters
-    "gain": Column("Measured gain of the filters at the term: 1 leaves it as it is."),
-    "passed": Column("Whether the gain is within the allowed tolerance of 1.", kind="boolean"),
+    "gain": Column("Measured gain at the term: 1 leaves it as it is."),
+    "peak_gain": Column("Gain at the channel where the term is largest, which site names."),
     "topography_correlation": Column(
         "Correlation of the term's topography before and after the cleaning."
     ),

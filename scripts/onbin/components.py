@@ -23,6 +23,8 @@ FIT_RATE_HZ, FIT_HIGHPASS_HZ, MOST_SAMPLES = 100.0, 1.0, 300_000
 # Stretches for leaving gross artifacts out of the fit: length, and amplitude over the median one.
 STRETCH_S, GROSS_FACTOR = 2.0, 5.0
 SAMPLES_PER_WEIGHT = 20
+# Variance, over the largest, below which a direction is but rounding (an earlier reference).
+SMALLEST_EIGENVALUE = 1e-8
 LABEL_SECONDS = 600.0
 # Segments that tags are looked for in, and their neighbouring bins on each side, past Hann leakage.
 TAG_SEGMENT_S, TAG_NEIGHBOURS = 10.0, (3, 4, 5, 6, 7)
@@ -121,6 +123,11 @@ def fit_components(raw, rank: int, method: str = "picard", seed: int = 0) -> Fit
     n_samples = slow_uv.shape[1]
 
     notes = []
+    eigenvalues = np.linalg.eigvalsh(np.cov(slow_uv))
+    found_rank = int(np.sum(eigenvalues > SMALLEST_EIGENVALUE * eigenvalues[-1]))
+    if found_rank < rank:
+        notes.append(f"{found_rank} independent channels where {rank} were expected")
+        rank = found_rank
     if left_out_s:
         notes.append(f"{left_out_s:.0f} s with gross artifacts stayed out of the fit")
     if n_samples < SAMPLES_PER_WEIGHT * rank**2:
@@ -171,35 +178,51 @@ def _without_gross_stretches(data_uv: np.ndarray, rate_hz: float) -> tuple[np.nd
     return stretches[:, kept].reshape(len(data_uv), -1), left_out_s
 
 
-def matrices(ica) -> tuple[np.ndarray, np.ndarray]:
-    """Maps (n_channels, n_components) and unmixing (n_components, n_channels) of a fit.
+@dataclass(frozen=True)
+class Separation:
+    """Fitted components as matrices: all that later steps need of them.
 
-    Sources are ``unmixing @ (data - mean)`` and their part in the data is ``maps @ sources``.
+    Attributes
+    ----------
+    maps : ndarray, shape (n_channels, n_components)
+        The part of a component in the data is its map times its source.
+    unmixing : ndarray, shape (n_components, n_channels)
+        Sources are ``unmixing @ data``.
+    channel : ndarray of str, shape (n_channels,)
     """
-    n_components = ica.n_components_
-    whitener = ica.pre_whitener_
-    pca = ica.pca_components_[:n_components]
-    maps = whitener * (pca.T @ ica.mixing_matrix_)
-    unmixing = (ica.unmixing_matrix_ @ pca) / whitener.T
-    return maps, unmixing
+
+    maps: np.ndarray
+    unmixing: np.ndarray
+    channel: np.ndarray
+
+    @classmethod
+    def of(cls, ica) -> "Separation":
+        """Read the matrices of a fitted ICA."""
+        pca = ica.pca_components_[: ica.n_components_]
+        maps = ica.pre_whitener_ * (pca.T @ ica.mixing_matrix_)
+        unmixing = (ica.unmixing_matrix_ @ pca) / ica.pre_whitener_.T
+        return cls(maps, unmixing, np.array(ica.ch_names))
+
+    @classmethod
+    def none(cls, channels: Sequence[str]) -> "Separation":
+        """No components."""
+        return cls(np.empty((len(channels), 0)), np.empty((0, len(channels))), np.array(channels))
+
+    def removal(self, removed: Sequence[int]) -> np.ndarray:
+        """Matrix (n_channels, n_channels) that takes components out of the channels."""
+        removed = list(removed)
+        return np.eye(len(self.maps)) - self.maps[:, removed] @ self.unmixing[removed]
 
 
-def removal_matrix(ica, removed: Sequence[int]) -> np.ndarray:
-    """Matrix (n_channels, n_channels) that takes the removed components out of the channels."""
-    maps, unmixing = matrices(ica)
-    removed = list(removed)
-    return np.eye(len(maps)) - maps[:, removed] @ unmixing[removed]
-
-
-def remove_components(raw, ica, removed: Sequence[int], block_s: float = 60.0):
-    """Take components out of a copy of a recording, block by block."""
-    cleaned = raw.copy()
-    block = max(round(block_s * raw.info["sfreq"]), 1)
-    if len(removed):
-        for start in range(0, cleaned.n_times, block):
-            stop = min(start + block, cleaned.n_times)
-            ica.apply(cleaned, exclude=list(removed), start=start, stop=stop, verbose="error")
-    return cleaned
+def remove_components(raw, separation: Separation, removed: Sequence[int]):
+    """Take components out of a copy of a recording."""
+    matrix = separation.removal(removed)
+    return raw.copy().apply_function(
+        lambda data: matrix @ data,
+        picks=list(separation.channel),
+        channel_wise=False,
+        verbose="error",
+    )
 
 
 def label_components(raw, ica) -> tuple[np.ndarray, tuple[str, ...]]:
@@ -250,7 +273,7 @@ def label_components(raw, ica) -> tuple[np.ndarray, tuple[str, ...]]:
     return np.asarray(probabilities, dtype=float), tuple(notes)
 
 
-def artifact_correlations(raw, ica) -> dict[str, np.ndarray]:
+def artifact_correlations(raw, separation: Separation) -> dict[str, np.ndarray]:
     """Absolute correlation of each component with each EOG and ECG channel.
 
     Returns
@@ -280,8 +303,8 @@ def artifact_correlations(raw, ica) -> dict[str, np.ndarray]:
         if len(picks) == 0:
             continue
         if sources is None:
-            _, unmixing = matrices(ica)
-            sources = unmixing @ slow(mne.pick_channels(raw.ch_names, ica.ch_names, ordered=True))
+            picked = mne.pick_channels(raw.ch_names, list(separation.channel), ordered=True)
+            sources = separation.unmixing @ slow(picked)
         channels = slow(picks)
         both = np.corrcoef(np.vstack([sources, channels]))[: len(sources), len(sources) :]
         found[label] = np.abs(both).max(axis=1)
@@ -314,7 +337,7 @@ def tag_shares(
     data_uv : ndarray, shape (n_channels, n_times)
         Channels that the components were fitted to.
     maps, unmixing : ndarray
-        From `matrices`.
+        Of a `Separation`.
     sfreq_hz : float
         Sampling rate.
     frequencies_hz : sequence of float

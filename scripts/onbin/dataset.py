@@ -237,6 +237,23 @@ def eeg_uv(raw) -> np.ndarray:
     return raw.get_data(picks="eeg") * 1e6
 
 
+def positions_m(raw) -> np.ndarray:
+    """Positions of the EEG channels, shape (n_channels, 3); NaN where there is none."""
+    placed = _positions(raw)
+    return np.array(
+        [
+            channel["loc"][:3] if channel["ch_name"] in placed else (np.nan,) * 3
+            for channel in raw.info["chs"]
+            if channel["ch_name"] in eeg_names(raw)
+        ]
+    )
+
+
+def bad_spans(raw) -> list[tuple[float, float, str]]:
+    """Stretches that the dataset marks as bad: onset and duration in s, and description."""
+    return [(a["onset"], a["duration"], a["description"]) for a in raw.annotations]
+
+
 def eeg_names(raw) -> list[str]:
     """Names of the EEG channels, bad ones too."""
     kinds = zip(raw.ch_names, raw.get_channel_types(), strict=True)

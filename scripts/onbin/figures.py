@@ -21,17 +21,14 @@ ROLES = {  # colour and marker of what a tag does in a condition
     FLICKERS: ("#5a3d8a", "D"),
     STILL: ("#7d8590", "^"),
 }
-HEAT = "mako_r"
+HEAT = "YlGnBu"
 STYLE = {
     "font.size": 9,
     "axes.titlesize": 9.5,
-    "axes.labelcolor": INK,
     "axes.edgecolor": MUTED,
     "axes.spines.top": False,
     "axes.spines.right": False,
-    "text.color": INK,
-    "xtick.color": INK,
-    "ytick.color": INK,
+    **dict.fromkeys(("text.color", "axes.labelcolor", "xtick.color", "ytick.color"), INK),
     "legend.frameon": False,
     "figure.constrained_layout.use": True,
 }
@@ -44,7 +41,7 @@ MOST_COLUMNS = 4
 
 @dataclass(frozen=True)
 class Quality:
-    """One person: windows kept and placed by condition, bad channels, components removed."""
+    """One person: windows kept and placed by condition, bad channels, components by class."""
 
     participant: str
     in_study: bool
@@ -149,17 +146,14 @@ def quality(
             if placed:
                 shares[row, column] = 100 * kept / placed
                 texts[row, column] = f"{kept}/{placed}" + (" !" if kept < min_windows else "")
-            else:
-                texts[row, column] = "none"
     seaborn.heatmap(
-        shares, ax=kept_axes, annot=texts, fmt="", cmap=HEAT, vmin=0, vmax=100, linewidths=0.6,
+        shares, ax=kept_axes, annot=texts, fmt="", cmap=HEAT, vmin=0, vmax=130, linewidths=0.6,
         cbar=False, annot_kws={"size": 7.5}, xticklabels=[_two_lines(c) for c in conditions],
         yticklabels=labels,
     )  # fmt: skip
+    centred = {"ha": "center", "va": "center", "size": 7.5, "color": MUTED}
     for row, column in np.argwhere(np.isnan(shares)):
-        kept_axes.text(
-            column + 0.5, row + 0.5, "none", ha="center", va="center", size=7.5, color=MUTED
-        )
+        kept_axes.text(column + 0.5, row + 0.5, "none", **centred)
     kept_axes.tick_params(length=0, rotation=0)
     kept_axes.set_title("Windows kept / placed\n(darker: larger share)")
 
@@ -181,7 +175,7 @@ def quality(
         left += counts
     removed_axes.set_xlim(0, max(left.max(initial=0), 1) * 1.05)
     removed_axes.xaxis.get_major_locator().set_params(integer=True)
-    removed_axes.set_title("Components removed\n(independent components)")
+    removed_axes.set_title("Components removed,\nby class")
     if classes:
         removed_axes.legend(loc="upper center", bbox_to_anchor=(0.5, -0.4 / height_in), ncols=2)
     for axes in (bad_axes, removed_axes):
@@ -215,26 +209,33 @@ def bins(neighbourhoods: Sequence[Neighbourhood]) -> Any:
         axes.plot(tag_hz, mean_uv[0], ROLES[hood.role][1], color=colour)
         kind = "" if hood.evoked else ", total"
         axes.set_title(f"{words(hood.condition)}\n{hood.role}{kind}")
-        axes.set_ylim(bottom=0)
         if column == 0:
             axes.set_ylabel(f"{words(hood.tag)}, {tag_hz:.4g} Hz\namplitude (µV)")
         axes.tick_params(labelleft=column == 0)
+    for axes in grid[:, 0]:  # shared along the row
+        axes.set_ylim(bottom=0)
     figure.supxlabel("frequency (Hz)", size=9)
     return figure
 
 
-@_styled
-def topographies(rows: Sequence[MapRow], info: Any) -> Any:
-    """Maps over the head, one row a tag or measure and one column a condition."""
-    import mne
-
-    placed = [
+def placed(info: Any) -> list[str]:
+    """Names of the channels that have a position."""
+    return [
         name
         for name, channel in zip(info.ch_names, info["chs"], strict=True)
         if np.isfinite(channel["loc"][:3]).all() and np.any(channel["loc"][:3])
     ]
-    if len(placed) < FEWEST_FOR_MAP:
-        return note(f"No maps: {len(placed)} channels have a position, {FEWEST_FOR_MAP} are needed")
+
+
+@_styled
+def topographies(rows: Sequence[MapRow], info: Any) -> Any:
+    """Maps over the head, one row a tag or measure and one column a condition.
+
+    `info` must have at least `FEWEST_FOR_MAP` channels that are `placed`.
+    """
+    import mne
+
+    channels = placed(info)
     conditions = list(dict.fromkeys(name for row in rows for name in row.values))
     figure = _figure(max(WIDTH_IN, 1.9 * len(conditions)), 0.3 + 2.2 * len(rows))
     grid = figure.subplots(len(rows), len(conditions), squeeze=False)
@@ -245,7 +246,7 @@ def topographies(rows: Sequence[MapRow], info: Any) -> Any:
         for axes, condition, told in zip(line, conditions, row.lines, strict=True):
             axes.set_title(f"{words(condition)}\n{told}".strip())
             values = row.values.get(condition, {})
-            chosen = [name for name in placed if np.isfinite(values.get(name, np.nan))]
+            chosen = [name for name in channels if np.isfinite(values.get(name, np.nan))]
             if len(chosen) < FEWEST_FOR_MAP:
                 axes.text(0.5, 0.5, "no map:\nnot measured", ha="center", va="center", color=MUTED)
                 axes.axis("off")
@@ -255,10 +256,8 @@ def topographies(rows: Sequence[MapRow], info: Any) -> Any:
                 np.array([values[name] for name in chosen]), picked, axes=axes, show=False,
                 vlim=limits, cmap=HEAT, sensors="k.", contours=4,
             )  # fmt: skip
-        line[0].text(
-            -0.08, 0.5, row.title, transform=line[0].transAxes, rotation=90, ha="right",
-            va="center",
-        )  # fmt: skip
+        beside = {"transform": line[0].transAxes, "rotation": 90, "ha": "right", "va": "center"}
+        line[0].text(-0.08, 0.5, row.title, **beside)
         if drawn is not None:
             figure.colorbar(drawn, ax=list(line), shrink=0.75, label=row.unit)
     return figure
@@ -290,13 +289,10 @@ def responses(rows: Sequence[Mapping[str, Any]]) -> Any:
             colour, marker = ROLES[cell[0]["role"]]
             for row in cell:
                 x = index + spread[people.index(row["participant"])]
-                line = colour if row["in_study"] else MUTED
                 bounds = [row["amplitude_low_uv"], row["amplitude_high_uv"]]
-                axes.plot([x, x], bounds, color=line, linewidth=1, alpha=0.55)
-                axes.plot(
-                    x, row["amplitude_uv"], marker, color=line, markersize=size,
-                    markerfacecolor=line if row["in_study"] else "white",
-                )  # fmt: skip
+                style = _person(colour, row["in_study"])
+                axes.plot([x, x], bounds, color=style["color"], linewidth=1, alpha=0.55)
+                axes.plot(x, row["amplitude_uv"], marker, markersize=size, **style)
             used = [row["amplitude_uv"] for row in cell if row["in_study"]]
             if used:
                 axes.hlines(np.mean(used), index - 0.44, index + 0.44, color=INK, linewidth=1.6)
@@ -305,8 +301,13 @@ def responses(rows: Sequence[Mapping[str, Any]]) -> Any:
         axes.set_ylabel("amplitude (µV)")
     grid[-1].set_xticks(range(len(conditions)), [_two_lines(c) for c in conditions])
     grid[-1].set_xlim(-0.6, len(conditions) - 0.4)
-    shown = [role for role in ROLES if any(row["role"] == role for row in rows)]
-    _legend(figure, [(role, *ROLES[role], True) for role in shown], rows)
+    entries = {role: ROLES[role] for role in ROLES if any(row["role"] == role for row in rows)}
+    if not all(row["in_study"] for row in rows):
+        entries["set aside"] = (MUTED, "o")
+    for label, (colour, marker) in entries.items():
+        grid[-1].plot([], [], marker, label=label, **_person(colour, label != "set aside"))
+    grid[-1].plot([], [], color=INK, linewidth=1.6, label="mean of those in the study")
+    figure.legend(loc="outside lower center", ncols=len(entries) + 1)
     return figure
 
 
@@ -341,43 +342,40 @@ def alpha(
         axes.axvspan(*band_hz, color=PALE, linewidth=0)
         of_study = []
         for spectrum in (s for s in spectra if s.condition == condition):
-            shown = (spectrum.frequencies_hz >= SHOWN_HZ[0]) & (
-                spectrum.frequencies_hz <= SHOWN_HZ[1]
-            )
+            hz = spectrum.frequencies_hz
+            shown = (hz >= SHOWN_HZ[0]) & (hz <= SHOWN_HZ[1])
             level_db = 10 * np.log10(np.maximum(spectrum.psd_uv2_per_hz[shown], 1e-12))
             style = {"color": ROLES[UNATTENDED][0], "alpha": 0.45, "linewidth": 0.7}
             if not spectrum.in_study:
                 style |= {"color": MUTED, "linestyle": ":", "alpha": 0.9}
-            axes.plot(spectrum.frequencies_hz[shown], level_db, **style)
+            axes.plot(hz[shown], level_db, **style)
             if spectrum.in_study:
-                of_study.append((spectrum.frequencies_hz[shown], level_db))
+                of_study.append((hz[shown], level_db))
         if of_study:
-            shortest = min(len(hz) for hz, _ in of_study)
-            mean_db = np.mean([level[:shortest] for _, level in of_study], axis=0)
-            axes.plot(of_study[0][0][:shortest], mean_db, color=INK, linewidth=1.8)
-        for frequency_hz in tags_hz[condition].values():
+            grid_hz = of_study[0][0]  # sampling rates may differ, and the spectra's grids with them
+            mean_db = np.mean([np.interp(grid_hz, *one) for one in of_study], axis=0)
+            axes.plot(grid_hz, mean_db, color=INK, linewidth=1.8)
+        for tag, frequency_hz in tags_hz[condition].items():
             axes.axvline(frequency_hz, color=ROLES[ATTENDED][0], linestyle="--", linewidth=0.9)
+            beside = {"transform": axes.get_xaxis_transform(), "rotation": 90, "va": "top"}
+            axes.text(frequency_hz + 0.4, 0.97, words(tag), size=7, **beside)
         axes.set_title(words(condition))
     above.supxlabel("frequency (Hz)", size=9)
     above.supylabel("power (dB re 1 µV²/Hz)", size=9)
 
     axes = below.subplots()
     axes.axvspan(*band_hz, color=PALE, linewidth=0)
-    found = sorted(
-        (row for row in frequencies if np.isfinite(row["alpha_frequency_hz"])),
-        key=lambda row: row["alpha_frequency_hz"],
-    )
+    found = [row for row in frequencies if np.isfinite(row["alpha_frequency_hz"])]
+    found.sort(key=lambda row: row["alpha_frequency_hz"])
     for row, level in zip(found, np.resize([0, 1, -1, 2, -2], len(found)), strict=True):
-        colour = ROLES[UNATTENDED][0] if row["in_study"] else MUTED
-        axes.plot(
-            row["alpha_frequency_hz"], level, "o", color=colour, markersize=5.5,
-            markerfacecolor=colour if row["in_study"] else "white",
-        )  # fmt: skip
+        style = _person(ROLES[UNATTENDED][0], row["in_study"])
+        axes.plot(row["alpha_frequency_hz"], level, "o", markersize=5.5, **style)
     axes.set_ylim(-3.5, 3.5)
     axes.set_yticks([])
-    axes.set_xlim(band_hz[0] - 2, band_hz[1] + 2)
+    peaks_hz = [row["alpha_frequency_hz"] for row in found]
+    axes.set_xlim(min([band_hz[0], *peaks_hz]) - 1, max([band_hz[1], *peaks_hz]) + 1)
     axes.set_xlabel("individual alpha frequency (Hz)")
-    axes.set_title(f"{len(found)} of {len(frequencies)} people have one", loc="left")
+    axes.set_title(f"{len(found)} of {len(frequencies)} people have a peak", loc="left")
     return figure
 
 
@@ -406,11 +404,8 @@ def relation(
     for index, tag in enumerate(tags):
         rows = [row for row in people if row["tag"] == tag]
         for row, shift in zip(rows, np.linspace(-0.3, 0.0, len(rows)), strict=True):
-            line = colour if row["in_study"] else MUTED
-            left.plot(
-                index + shift, row["rho"], "o", color=line, markersize=4.5,
-                markerfacecolor=line if row["in_study"] else "white",
-            )  # fmt: skip
+            style = _person(colour, row["in_study"])
+            left.plot(index + shift, row["rho"], "o", markersize=4.5, **style)
         for row in (row for row in group if row["tag"] == tag):
             x = index + 0.25
             left.plot([x, x], [row["rho_low"], row["rho_high"]], color=INK, linewidth=1.6)
@@ -419,20 +414,18 @@ def relation(
     left.set_xlim(-0.6, len(tags) - 0.4)
     left.set_xticks(range(len(tags)), [_two_lines(tag) for tag in tags])
     left.set_ylabel("Spearman's rho, windows of a person")
-    left.set_title("alpha and response: people (dots), mean and 95 % interval (diamond)")
+    left.set_title("dots: people; diamond: mean, 95 % interval")
 
     own = list(dict.fromkeys(row["tag"] for row in halves))
     for row in halves:
         x = own.index(row["tag"]) + np.array([-0.2, 0.2])
-        style = {"color": colour, "marker": "o"} if row["in_study"] else {"color": MUTED}
-        style |= {} if row["in_study"] else {"marker": "o", "markerfacecolor": "white"}
-        values = [row["little_uv"], row["much_uv"]]
-        right.plot(x, values, markersize=3.5, linewidth=0.8, alpha=0.75, **style)
+        values, style = [row["little_uv"], row["much_uv"]], _person(colour, row["in_study"])
+        right.plot(x, values, "o-", markersize=3.5, linewidth=0.8, alpha=0.75, **style)
     for index, tag in enumerate(own):
         used = [(r["little_uv"], r["much_uv"]) for r in halves if r["tag"] == tag and r["in_study"]]
         if used:
-            means = np.nanmean(used, axis=0)
-            right.plot(index + np.array([-0.2, 0.2]), means, color=INK, linewidth=2.2)
+            x = index + np.array([-0.2, 0.2])
+            right.plot(x, np.mean(used, axis=0), color=INK, linewidth=2.2)
     right.axhline(0, color=MUTED, linewidth=0.6)
     places = [index + shift for index in range(len(own)) for shift in (-0.2, 0.2)]
     right.set_xticks(places, ["little\nalpha", "much\nalpha"] * len(own))
@@ -442,29 +435,18 @@ def relation(
     return figure
 
 
+def _person(colour: str, in_study: bool) -> dict[str, str]:
+    """Style of a person's marker: open and grey where the person is set aside."""
+    if in_study:
+        return {"color": colour, "markerfacecolor": colour}
+    return {"color": MUTED, "markerfacecolor": "white"}
+
+
 def _two_lines(name: str) -> str:
     """Words on two lines where one would be long."""
     text = words(name)
-    if len(text) <= 10 or " " not in text:
+    if len(text) <= 12 or " " not in text:
         return text
     spaces = [i for i, letter in enumerate(text) if letter == " "]
     middle = min(spaces, key=lambda i: abs(i - len(text) / 2))
     return f"{text[:middle]}\n{text[middle + 1 :]}"
-
-
-def _legend(
-    figure: Any, entries: Sequence[tuple[str, str, str, bool]], rows: Sequence[Mapping[str, Any]]
-) -> None:
-    from matplotlib.lines import Line2D
-
-    if any(not row["in_study"] for row in rows):
-        entries = [*entries, ("set aside", MUTED, "o", False)]
-    handles = [
-        Line2D(
-            [], [], color=colour, marker=marker, linestyle="", label=label,
-            markerfacecolor=colour if filled else "white",
-        )
-        for label, colour, marker, filled in entries
-    ]  # fmt: skip
-    handles.append(Line2D([], [], color=INK, linewidth=1.6, label="mean of those in the study"))
-    figure.legend(handles=handles, loc="outside lower center", ncols=len(handles))

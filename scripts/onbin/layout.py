@@ -29,7 +29,7 @@ FILES = {
     "filter_gains": "{recording}_desc-filtered_gains.tsv",
     "sensors_signal": "{recording}_desc-sensors_eeg.fif",
     "sensors_verdicts": "{recording}_desc-sensors_verdicts.tsv",
-    "components_ica": "{recording}_desc-components_ica.fif",
+    "components_ica": "{recording}_desc-components_ica.npz",
     "components_verdicts": "{recording}_desc-components_verdicts.tsv",
     "windows_signal": "{recording}_desc-clean_eeg.fif",
     "windows_verdicts": "{recording}_desc-windows_verdicts.tsv",

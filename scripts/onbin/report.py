@@ -45,10 +45,11 @@ STUDY_FILES = {
 
 @dataclass(frozen=True)
 class Drawing:
-    """A figure, and what it shows in words."""
+    """A figure, and what it shows in words; one that is empty says why and stands in no page."""
 
     figure: Any
     alt: str
+    empty: bool = False
 
 
 # --- figures -------------------------------------------------------------------------------------
@@ -67,7 +68,7 @@ def draw(material: Material) -> dict[str, Drawing]:
 
 
 def _nothing(why: str) -> Drawing:
-    return Drawing(figures.note(why), why)
+    return Drawing(figures.note(why), why, empty=True)
 
 
 def _quality(material: Material) -> Drawing:
@@ -103,6 +104,11 @@ def _bins(material: Material) -> Drawing:
 def _topographies(material: Material) -> Drawing:
     if not material.in_study:
         return _nothing("Nobody is in the study, so there is no map over people.")
+    positions = len(figures.placed(material.info))
+    if positions < figures.FEWEST_FOR_MAP:
+        return _nothing(
+            f"No map: {positions} channels have a position, {figures.FEWEST_FOR_MAP} are needed."
+        )
     rows = report_tables.map_rows(material)
     told = []
     for row in rows:
@@ -196,7 +202,8 @@ def number(value: float | Fraction | None, digits: int = 3) -> str:
     value = float(value)
     if value == 0:
         return "0"
-    decimals = max(0, digits - 1 - math.floor(math.log10(abs(value))))
+    rounded = abs(float(f"{value:.{digits - 1}e}"))
+    decimals = max(0, digits - 1 - math.floor(math.log10(rounded)))
     text = f"{value:.{min(decimals, 9)}f}"
     return text.replace("-", "−")
 
@@ -214,9 +221,14 @@ def p_value(p: float | None) -> str:
     return f"= {number(p, 2)}"
 
 
-def exact(value: Fraction) -> str:
-    """Write a fraction as it is: 72/5, 18."""
-    return str(value)
+def decibel(value: float | None) -> str:
+    """Write a level in dB."""
+    return "n/a" if value is None or not math.isfinite(value) else f"{value:.1f}".replace("-", "−")
+
+
+def plain(value: float | Fraction) -> str:
+    """Write a number that was set, as it was set: 14.4, 25."""
+    return f"{float(value):.5g}"
 
 
 def answers(material: Material) -> list[dict[str, Any]]:
@@ -224,7 +236,7 @@ def answers(material: Material) -> list[dict[str, Any]]:
     return [
         row
         | {
-            "sentence": _sentence(row),
+            "sentence": _sentence(row, material.settings["comparisons"][row["comparison"]]),
             "missing": [who for who in material.in_study if who not in (row["who"] or "").split()],
             "floor": _floor(row, len(material.comparisons)),
             "detectable": (
@@ -237,38 +249,40 @@ def answers(material: Material) -> list[dict[str, Any]]:
     ]
 
 
-def _sentence(row: Mapping[str, Any]) -> str:
+def _sentence(row: Mapping[str, Any], comparison: Mapping[str, Any]) -> str:
     estimate = row["estimate"]
     if not math.isfinite(estimate):
         return f"This could not be computed from {_people(row['n'])}."
+    plus, minus = (_cells(comparison[side]) for side in ("plus", "minus"))
     unit = "" if row["estimate_unit"] in ("none", "rho") else f" {row['estimate_unit']}"
-    what = f"{MEASURES[row['measure']]} at {words(row['site'])}"
-    compared = words(row["plus"])
-    if row["minus"] != "zero":
-        compared += f" than in {words(row['minus'])}"
-    side = "higher" if estimate > 0 else "lower"
-    if row["estimate_unit"] == "rho":
-        between = "" if row["minus"] == "zero" else f", less that in {words(row['minus'])},"
-        covariate = words(row["kind"].removeprefix("correlation with "))
-        said = f"{what} in {words(row['plus'])}{between} correlates with {covariate}: rho = "
-        said += number(estimate)
-    elif row["kind"] != "within people":
-        difference = "" if row["minus"] == "zero" else f" less {words(row['minus'])}"
-        said = f"{what} ({words(row['plus'])}{difference}), {row['kind']}: {number(estimate)}{unit}"
-    elif row["minus"] == "zero":
-        said = f"{what} in {compared} is {number(estimate)}{unit}"
+    said = f"{MEASURES[row['measure']]} at {words(row['site'])}"
+    less = f" less that for {minus}" if minus else ""
+    if comparison["covariate"]:
+        covariate = words(comparison["covariate"])
+        said += f" for {plus}{less} and {covariate}: Spearman's rho is {number(estimate)}"
+    elif comparison["groups"]:
+        said += f" for {plus}{less}, {words(row['kind'])}: {number(estimate)}{unit}"
+    elif minus:
+        side = "higher" if estimate > 0 else "lower"
+        said += f" is {number(abs(estimate))}{unit} {side} for {plus} than for {minus}"
     else:
-        said = f"{what} is {number(abs(estimate))}{unit} {side} in {compared}"
+        said += f" for {plus} is {number(estimate)}{unit}"
     low, high = row["estimate_low"], row["estimate_high"]
+    interval, zero = "too few people for an interval", ""
     if math.isfinite(low) and math.isfinite(high):
-        zero = " Zero lies within the interval." if low <= 0 <= high else ""
         interval = f"95 % interval {number(low)} to {number(high)}{unit}"
-    else:
-        zero, interval = "", "too few people for an interval"
-    said = said[0].upper() + said[1:]
+        zero = " Zero lies within the interval." if low <= 0 <= high else ""
     return (
-        f"{said} ({interval}; n = {row['n']}; p {p_value(row['p'])}, "
-        f"after Holm's correction {p_value(row['p_holm']).removeprefix('= ')}).{zero}"
+        f"{said[0].upper()}{said[1:]} ({interval}; n = {row['n']}; p {p_value(row['p'])}, after "
+        f"Holm's correction {p_value(row['p_holm']).removeprefix('= ')}).{zero}"
+    )
+
+
+def _cells(cells: Iterable[Mapping[str, Any]]) -> str:
+    """Cells of a comparison in words: left panel in watch left and the like."""
+    return " and ".join(
+        words(f"{cell['tag']} in {cell['condition']}" if cell["tag"] else cell["condition"])
+        for cell in cells
     )
 
 
@@ -279,8 +293,8 @@ def _people(n: int) -> str:
 def _floor(row: Mapping[str, Any], comparisons: int) -> float | None:
     """Least p that flipping signs of so few people can give, where that is too much to tell."""
     floor = 2 / 2 ** row["n"]
-    too_high = row["kind"] == "within people" and floor * comparisons > LEVEL
-    return min(floor, 1.0) if too_high and row["n"] else None
+    tested = row["kind"] == "within people" and row["n"] > 1
+    return floor if tested and floor * comparisons > LEVEL else None
 
 
 # --- the page ------------------------------------------------------------------------------------
@@ -316,11 +330,13 @@ def page(material: Material, drawings: Mapping[str, Drawing], images: Mapping[st
     )
     environment.filters |= {
         "number": number, "p_value": p_value, "words": words, "listed": listed, "people": _people,
+        "plain": plain, "decibel": decibel,
     }  # fmt: skip
     shown = {
         name: {
             "source": f"data:image/png;base64,{base64.b64encode(images[name]).decode()}",
             "alt": drawing.alt,
+            "empty": drawing.empty,
             "file": layout.FILES[f"report_{name}"],
         }
         for name, drawing in drawings.items()

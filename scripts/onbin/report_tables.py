@@ -60,7 +60,9 @@ class Plan:
             self.passband_hz,
             self.line_hz,
         )
-        usable = tagging.usable_neighbours(frequency, offsets, duration_s, occupied)
+        usable = tagging.usable_neighbours(
+            frequency, offsets, duration_s, occupied, self.passband_hz
+        )
         return [frequency + j / duration_s for j in offsets], usable
 
 
@@ -217,7 +219,12 @@ def flicker_plans(material: Material) -> list[dict[str, Any]]:
     for who, plan in material.plans.items():
         shared.setdefault(plan, []).append(who)
     return [
-        {"who": who, "rate": plan.rate, "terms": list(_term_rows(material, plan))}
+        {
+            "who": who,
+            "rate": plan.rate,
+            "passband_hz": plan.passband_hz,
+            "terms": list(_term_rows(material, plan)),
+        }
         for plan, who in shared.items()
     ]
 
@@ -235,7 +242,10 @@ def _term_rows(material: Material, plan: Plan) -> Iterator[dict[str, Any]]:
             frequencies, usable = plan.neighbours(settings, index, flickering)
             missing = [f for f, is_usable in zip(frequencies, usable, strict=True) if not is_usable]
             if missing:
-                left_out.append({"conditions": conditions, "frequencies": missing})
+                above = [f for f in missing if f > 1 / duration_s]
+                left_out.append(
+                    {"conditions": conditions, "count": len(missing), "frequencies": above}
+                )
         same = [f"{t.tag} {t.term}" for t in terms if t != term and t.frequency == term.frequency]
         yield {
             "term": term,
@@ -299,7 +309,7 @@ def recording_facts(material: Material) -> list[dict[str, Any]]:
             "flagged": [
                 (r["component"], r["component_class"], r["reason"])
                 for r in of["components"]
-                if r["verdict"] != "removed" and r["reason"]
+                if r["flagged"]
             ],
             "windows": _windows(of["windows"], material.conditions),
             "reasons": Counter(

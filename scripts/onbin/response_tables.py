@@ -26,6 +26,8 @@ class Coefficients:
     bins : ndarray of int, shape (n_bins,)
     durations_s : list of Fraction, one for each term
         Length of its window; the inverse is the width of a bin.
+    passband_hz : float
+        What the filters pass.
     condition, recording, trial, window : ndarray, shape (n_windows,)
     site, site_kind, site_channels : ndarray of str, shape (n_sites,)
     """
@@ -34,6 +36,7 @@ class Coefficients:
     terms: list[Term]
     bins: np.ndarray
     durations_s: list[Fraction]
+    passband_hz: float
     condition: np.ndarray
     recording: np.ndarray
     trial: np.ndarray
@@ -47,9 +50,11 @@ class Coefficients:
         """Take up stored arrays; ``terms`` are the settings that make up the terms."""
         rate = Fraction(str(stored["rate"]))
         names = ("condition", "recording", "trial", "window", "site", "site_kind", "site_channels")
+        passband_hz = float(stored["passband_hz"])
         return cls(
             values_uv=stored["coefficients_uv"].astype(complex),
-            terms=tagging.study_terms(terms, float(stored["passband_hz"])),
+            terms=tagging.study_terms(terms, passband_hz),
+            passband_hz=passband_hz,
             bins=stored["bins"],
             durations_s=[int(n) / rate for n in stored["samples"]],
             **{name: stored[name] for name in names},
@@ -117,6 +122,7 @@ def response_rows(
                 coefficients.bins[1:].tolist(),
                 coefficients.durations_s[index],
                 occupied_in[condition],
+                coefficients.passband_hz,
             )
             measured = response.measures(
                 values_uv[:, :, 0], values_uv[:, :, 1:][:, :, usable], about["phase_locked"]

@@ -44,7 +44,7 @@ def run(step: Callable[..., None], job: Any) -> None:
                     outputs=SimpleNamespace(**making),
                     settings=job.params.settings,
                 )
-                if "sidecars" in job.output.keys():
+                if hasattr(job.output, "sidecars"):
                     for path in making.values():
                         _write_sidecar(path, job)
         except OnbinError as error:
@@ -126,6 +126,6 @@ def _write_sidecar(made: Path, job: Any) -> None:
 def _fail(message: str, job: Any) -> None:
     """Tell the user in the log and on the terminal, without a traceback, and end the job."""
     log.error(message)
-    recording = " ".join(str(value) for value in job.wildcards.values())
+    recording = " ".join(str(value) for _, value in job.wildcards.items())
     print(f"\n{recording or 'study'}, {message}\n", file=sys.__stderr__, flush=True)
     sys.exit(1)

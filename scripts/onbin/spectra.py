@@ -187,13 +187,18 @@ def bin_coefficients(
     Returns
     -------
     coefficients_uv : ndarray of complex, shape (n_windows, n_sites, n_terms, n_bins)
+        NaN at bins less than one bin above zero or below half the sampling rate.
     """
     shape = (len(starts), len(signal_uv), len(frequencies_hz), len(bins))
-    coefficients_uv = np.empty(shape, dtype=complex)
+    coefficients_uv = np.full(shape, np.nan, dtype=complex)
+    if len(starts) == 0:
+        return coefficients_uv
     for n_samples in np.unique(samples):
-        chosen = np.flatnonzero(samples == n_samples)
-        grid_hz = frequencies_hz[chosen, None] + bins * rate_hz / n_samples
+        width_hz = rate_hz / n_samples
         windows_uv = cut(signal_uv, starts, n_samples)
-        flat = to_onset(project(windows_uv, rate_hz, grid_hz.ravel()), grid_hz.ravel(), offsets_s)
-        coefficients_uv[:, :, chosen] = flat.reshape(*shape[:2], *grid_hz.shape)
+        for term in np.flatnonzero(samples == n_samples):
+            bins_hz = frequencies_hz[term] + bins * width_hz
+            there = (bins_hz > 0.99 * width_hz) & (bins_hz < rate_hz / 2 - 0.99 * width_hz)
+            projected = project(windows_uv, rate_hz, bins_hz[there])
+            coefficients_uv[:, :, term, there] = to_onset(projected, bins_hz[there], offsets_s)
     return coefficients_uv

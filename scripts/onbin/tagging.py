@@ -201,12 +201,16 @@ def neighbour_offsets(count: int, skip: int) -> list[int]:
 
 
 def usable_neighbours(
-    frequency: Fraction, offsets: Iterable[int], duration_s: Fraction, occupied: Iterable[Fraction]
+    frequency: Fraction,
+    offsets: Iterable[int],
+    duration_s: Fraction,
+    occupied: Iterable[Fraction],
+    below_hz: float,
 ) -> list[bool]:
-    """Tell which neighbouring bins hold noise only.
+    """Tell which neighbouring bins hold noise only, and noise that the filters left as it was.
 
-    A bin is left out when an occupied frequency is closer to it than one bin, or when it lies at or
-    below zero frequency.
+    A bin is left out when an occupied frequency is closer to it than one bin, when it lies within
+    a bin of zero frequency, or beyond what the filters pass.
 
     Parameters
     ----------
@@ -218,10 +222,12 @@ def usable_neighbours(
         Length of the window, whose inverse is the width of a bin.
     occupied : iterable of Fraction
         Frequencies in Hz of the other terms that are driven, and of the mains.
+    below_hz : float
+        End of the pass band.
     """
     others = [f for f in occupied if f != frequency]
     bins = [frequency + Fraction(j) / duration_s for j in offsets]
     return [
-        b > 1 / duration_s and all(abs(b - other) * duration_s >= 1 for other in others)
+        1 / duration_s < b <= below_hz and all(abs(b - other) * duration_s >= 1 for other in others)
         for b in bins
     ]

@@ -5,6 +5,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from onbin.components import Separation
+from onbin.sensors import interpolate_and_reference
+
 KEPT, LEFT_OUT = "kept", "left out"
 
 
@@ -265,7 +268,11 @@ def _figures(
 
 
 def cleaning_matrix(
-    raw, bad: Sequence[str], reference, ica=None, removed: Sequence[int] = ()
+    raw,
+    bad: Sequence[str],
+    reference: str | Sequence[str] | None,
+    separation: Separation | None = None,
+    removed: Sequence[int] = (),
 ) -> tuple[np.ndarray, list[str]]:
     """Write the fitted cleaning chain after the filters as one matrix, channels by channels.
 
@@ -280,7 +287,7 @@ def cleaning_matrix(
         Interpolated channels.
     reference : "average", list of str or None
         As in `sensors.interpolate_and_reference`.
-    ica : mne.preprocessing.ICA, optional
+    separation : components.Separation, optional
         Fitted components.
     removed : sequence of int
         Components taken out.
@@ -294,16 +301,13 @@ def cleaning_matrix(
     """
     import mne
 
-    from onbin.components import removal_matrix
-    from onbin.sensors import interpolate_and_reference
-
     info = mne.pick_info(raw.info, mne.pick_types(raw.info, eeg=True, exclude=[]))
     impulses = mne.io.RawArray(np.eye(len(info.ch_names)), info, verbose="error")
     cleaned = interpolate_and_reference(impulses, bad, reference).raw
     matrix = cleaned.get_data()
-    if ica is not None and len(removed):
-        rows = [cleaned.ch_names.index(name) for name in ica.ch_names]
-        matrix[rows] = removal_matrix(ica, removed) @ matrix[rows]
+    if separation is not None:
+        rows = [cleaned.ch_names.index(name) for name in separation.channel]
+        matrix[rows] = separation.removal(removed) @ matrix[rows]
     return matrix, list(cleaned.ch_names)
 
 

@@ -4,8 +4,17 @@ from collections.abc import Iterator, Mapping, Sequence
 from fractions import Fraction
 from typing import Any
 
+import numpy as np
+
+from onbin import spectra
 from onbin.tagging import Term
-from onbin.windows import LEFT_OUT, Unplaced, WindowVerdict
+from onbin.windows import LEFT_OUT, Unplaced, Window, WindowVerdict, chain_gain
+
+LIMIT_COLUMNS = {
+    "peak_to_peak_uv": "peak_to_peak_limit_uv",
+    "gradient_uv_per_ms": "gradient_limit_uv_per_ms",
+    "muscle_uv": "muscle_limit_uv",
+}
 
 
 def samples_by_condition(
@@ -54,7 +63,7 @@ def verdict_rows(
             "verdict": verdict.verdict,
             "reason": ", ".join(verdict.reasons) or None,
             **verdict.figures,
-            **{f"{name.removesuffix('_uv')}_limit_uv": v for name, v in verdict.limits.items()},
+            **{LIMIT_COLUMNS[name]: v for name, v in verdict.limits.items() if name != "flat_uv"},
         }
     for number, missing in enumerate(unplaced, start=len(verdicts) + 1):
         index = missing.index_in_trial
@@ -65,4 +74,56 @@ def verdict_rows(
             "index_in_trial": None if index is None else index + 1,
             "verdict": LEFT_OUT,
             "reason": missing.reason,
+        }
+
+
+def survival_rows(
+    signal_uv: np.ndarray,
+    names: Sequence[str],
+    removal: np.ndarray,
+    kept: Sequence[Window],
+    terms: Sequence[Term],
+    samples: Mapping[Term, int],
+    rate_hz: float,
+    flickering: Mapping[str, Sequence[str]],
+) -> Iterator[dict[str, Any]]:
+    """What the removal of components does to each term, by passing its own topography through.
+
+    Parameters
+    ----------
+    signal_uv : ndarray, shape (n_channels, n_times)
+        Before the removal.
+    names : sequence of str
+    removal : ndarray, shape (n_channels, n_channels)
+    kept : sequence of Window
+    terms : sequence of Term
+    samples : mapping of Term to int
+    rate_hz : float
+    flickering : mapping
+        Tags that flicker, by condition.
+    """
+    for term in terms:
+        chosen = [window for window in kept if term.driven_by(flickering[window.condition])]
+        if not chosen:
+            continue
+        frequency_hz = float(term.frequency)
+        coefficients = spectra.bin_coefficients(
+            signal_uv,
+            np.array([window.start_sample for window in chosen]),
+            np.array([window.offset_s for window in chosen]),
+            rate_hz,
+            np.array([frequency_hz]),
+            np.array([samples[term]]),
+            np.array([0]),
+        )
+        topography = coefficients[:, :, 0, 0].mean(axis=0)
+        (survival,) = chain_gain(removal, np.eye(len(names)), topography)
+        yield {
+            "tag": term.tag,
+            "term": term.term,
+            "frequency_hz": frequency_hz,
+            "site": names[survival.peak_channel],
+            "gain": survival.gain,
+            "peak_gain": survival.peak_gain,
+            "topography_correlation": survival.correlation,
         }

@@ -1,0 +1,267 @@
+import dataclasses
+import json
+
+import mne
+import numpy as np
+import pytest
+from onbin.components import (
+    CLASSES,
+    ComponentLimits,
+    Separation,
+    artifact_correlations,
+    fit_components,
+    judge_components,
+    label_components,
+    remove_components,
+    tag_shares,
+    variance_shares,
+)
+from onbin.sensors import interpolate_and_reference
+from test_sensors import SAMPLING_HZ, simulate
+
+TAG_HZ = 12.0
+
+
+@pytest.fixture(scope="module")
+def simulated():
+    return simulate(24, 1, duration_s=120, tag_hz=TAG_HZ)
+
+
+@pytest.fixture(scope="module")
+def referenced(simulated):
+    return interpolate_and_reference(simulated.raw(simulated.filtered_uv()), [], "average")
+
+
+@pytest.fixture(scope="module")
+def fit(referenced):
+    return fit_components(referenced.raw, referenced.rank)
+
+
+@pytest.fixture(scope="module")
+def separation(fit):
+    return Separation.of(fit.ica)
+
+
+@pytest.fixture(scope="module")
+def verdicts(referenced, fit, separation):
+    data_uv = referenced.raw.get_data() * 1e6
+    maps, unmixing = separation.maps, separation.unmixing
+    probabilities, _ = label_components(referenced.raw, fit.ica)
+    shares = tag_shares(data_uv, maps, unmixing, SAMPLING_HZ, [TAG_HZ, 2 * TAG_HZ])
+    variance = variance_shares(data_uv, maps, unmixing)
+    return judge_components(probabilities, shares, variance, ComponentLimits())
+
+
+def rms(signal):
+    return np.sqrt(np.mean(signal**2))
+
+
+def probabilities_of(**chances):
+    """One row of class probabilities, the rest going to `other`."""
+    row = np.zeros(len(CLASSES))
+    for label, chance in chances.items():
+        row[CLASSES.index(label)] = chance
+    row[-1] += 1 - row.sum()
+    return row
+
+
+# -------------------------------------------------------------------------------------- the fit
+
+
+def test_as_many_components_as_the_rank(fit):
+    assert fit.ica.n_components_ == 23
+    assert fit.n_samples == 120 * 100
+
+
+def test_interpolated_channels_lower_the_rank(simulated):
+    referenced = interpolate_and_reference(
+        simulated.raw(simulated.filtered_uv()), ["F3", "P8"], "average"
+    )
+    short = referenced.raw.crop(0, 20)
+    fit = fit_components(short, referenced.rank)
+    assert fit.ica.n_components_ == 21
+    # 20 s at 100 Hz over 21²: the known rule of 20 samples a weight (common practice).
+    assert any("2000 samples for 21 components, 4.5 a weight" in note for note in fit.notes)
+
+
+@pytest.mark.parametrize("method", ["infomax", "fastica"])
+def test_other_methods(referenced, method):
+    chosen = referenced.raw.copy().crop(0, 30).pick(referenced.raw.ch_names[:10])
+    fit = fit_components(chosen, 10, method)
+    assert fit.ica.method == method
+    assert fit.ica.n_components_ == 10
+
+
+def test_same_seed_same_components(referenced):
+    chosen = referenced.raw.copy().crop(0, 20).pick(referenced.raw.ch_names[:8])
+    first, second = (fit_components(chosen, 8, seed=3) for _ in range(2))
+    np.testing.assert_array_equal(first.ica.unmixing_matrix_, second.ica.unmixing_matrix_)
+
+
+def test_a_reference_that_nobody_told_of_is_noticed(referenced):
+    chosen = referenced.raw.copy().crop(0, 60)
+    fit = fit_components(chosen, 24)
+    assert fit.ica.n_components_ == 23
+    assert "23 independent channels where 24 were expected" in fit.notes
+
+
+def test_too_few_channels_have_no_components():
+    few = simulate(3, 1)
+    fit = fit_components(few.raw(few.filtered_uv()), 3)
+    assert fit.ica is None
+    assert fit.notes == ("3 EEG channels are too few to separate sources: no components",)
+
+
+def test_gross_stretches_stay_out_of_the_fit(referenced):
+    chosen = referenced.raw.copy().crop(0, 40).pick(referenced.raw.ch_names[:8])
+    chosen._data[:, 2000:2400] += 5e-3 * np.random.default_rng(0).standard_normal((8, 400))
+    fit = fit_components(chosen, 8)
+    assert fit.n_samples == (40 - 2) * 100
+    assert "2 s with gross artifacts stayed out of the fit" in fit.notes
+
+
+# ------------------------------------------------------------------------- matrices and removal
+
+
+def test_matrices_give_the_sources_of_mne(referenced, fit, separation):
+    np.testing.assert_allclose(separation.unmixing @ separation.maps, np.eye(23), atol=1e-8)
+    data = referenced.raw.get_data()
+    mean = fit.ica.pca_mean_[:, None] * fit.ica.pre_whitener_
+    sources = fit.ica.get_sources(referenced.raw).get_data()
+    np.testing.assert_allclose(separation.unmixing @ (data - mean), sources, atol=1e-8)
+
+
+def test_removal_equals_what_mne_removes(referenced, fit, separation):
+    by_mne = fit.ica.apply(referenced.raw.copy(), exclude=[0, 4], verbose="error").get_data()
+    ours = remove_components(referenced.raw, separation, [0, 4]).get_data()
+    # The fit's own mean is put back by mne: a constant, which no window keeps.
+    difference = ours - by_mne
+    np.testing.assert_allclose(difference, difference[:, :1].repeat(ours.shape[1], 1), atol=1e-14)
+
+
+def test_removal_leaves_the_original_and_other_channels_alone(referenced, separation):
+    before = referenced.raw.get_data()
+    eog = referenced.raw.copy().pick(["Fp1"]).rename_channels({"Fp1": "EOG"})
+    eog.set_channel_types({"EOG": "eog"}, verbose="error")
+    both = referenced.raw.copy().add_channels([eog], force_update_info=True)
+    cleaned = remove_components(both, separation, [0, 1])
+    np.testing.assert_array_equal(cleaned.get_data(picks="EOG"), before[:1])
+    np.testing.assert_array_equal(referenced.raw.get_data(), before)
+    same = remove_components(referenced.raw, Separation.none(referenced.raw.ch_names), [])
+    np.testing.assert_array_equal(same.get_data(), before)
+
+
+# ---------------------------------------------------------------------------- labels and evidence
+
+
+def test_classes_stand_in_the_order_of_iclabel():
+    from mne_icalabel.config import ICALABEL_METHODS_NUMERICAL_TO_STR as METHODS
+
+    theirs = list(METHODS["iclabel"].values())
+    longer = {"muscle": "muscle artifact", "eye": "eye blink", "heart": "heart beat"}
+    ours = [longer.get(label, label) for label in CLASSES]
+    assert theirs == ours
+
+
+def test_labels_are_probabilities_and_say_what_differs(referenced, fit):
+    probabilities, notes = label_components(referenced.raw, fit.ica)
+    assert probabilities.shape == (23, 7)
+    np.testing.assert_allclose(probabilities.sum(axis=1), 1, atol=1e-5)  # single precision
+    assert "sampled at 200 Hz, ICLabel was trained at 250 Hz and above" in notes
+    assert not any("average reference" in note for note in notes)
+    again, _ = label_components(referenced.raw, fit.ica)
+    np.testing.assert_array_equal(again, probabilities)
+
+
+def test_without_positions_nothing_is_labelled(referenced, fit):
+    bare = referenced.raw.copy()
+    bare.set_montage(None)
+    probabilities, notes = label_components(bare, fit.ica)
+    assert np.isnan(probabilities).all()
+    assert notes == ("some channels have no position: components cannot be labelled",)
+    verdicts = judge_components(probabilities, np.zeros((23, 1)), np.ones(23), ComponentLimits())
+    assert {verdict.reason for verdict in verdicts} == {"not labelled"}
+
+
+def test_artifacts_go_and_the_response_stays(simulated, separation, verdicts):
+    removed = [verdict.component for verdict in verdicts if verdict.verdict == "removed"]
+    assert {verdicts[component].label for component in removed} >= {"eye"}
+    matrix = separation.removal(removed)
+    eyes, tag = (
+        part - part.mean(axis=0) for part in (simulated.parts_uv["eyes"], simulated.parts_uv["tag"])
+    )
+    front = [simulated.names.index(name) for name in ("Fp1", "Fpz", "Fp2")]
+    back = [simulated.names.index(name) for name in ("O1", "Oz", "O2")]
+    eyes = eyes - eyes.mean(axis=1, keepdims=True)
+    assert rms((matrix @ eyes)[front]) < rms(eyes[front]) / 10
+    np.testing.assert_allclose(rms((matrix @ tag)[back]) / rms(tag[back]), 1, atol=0.02)
+
+
+def test_correlation_with_eye_and_heart_channels(simulated, referenced, separation):
+    assert artifact_correlations(referenced.raw, separation) == {}
+    eog_uv = simulated.parts_uv["eyes"][simulated.names.index("Fp1")]
+    info = mne.create_info(["EOG"], SAMPLING_HZ, "eog")
+    eog = mne.io.RawArray(eog_uv[None] * 1e-6, info, verbose="error")
+    both = referenced.raw.copy().add_channels([eog], force_update_info=True)
+    found = artifact_correlations(both, separation)
+    assert set(found) == {"eye"}
+    assert found["eye"].max() > 0.9
+    assert np.sort(found["eye"])[-4] < 0.5  # blinks and gaze are two or three components
+
+
+def test_tag_shares_of_known_sources():
+    rng = np.random.default_rng(0)
+    times_s = np.arange(int(120 * SAMPLING_HZ)) / SAMPLING_HZ
+    sources = rng.standard_normal((4, times_s.size))
+    sources[3] = 30 * rng.standard_normal(times_s.size).cumsum() / np.sqrt(SAMPLING_HZ)
+    tag = np.cos(2 * np.pi * 7.5 * times_s)
+    sources[0] += 2 * tag
+    sources[1] += tag
+    maps = np.array([[1.0, 0.0, 0, 0], [0, 2.0, 0, 0], [0, 0, 1.0, 0], [0, 1.0, 0, 5.0]])
+    shares = tag_shares(maps @ sources, maps, np.linalg.inv(maps), SAMPLING_HZ, [7.5, 15.0])
+    # Powers 2² · 1 and 1² · (2² + 1²): shares 4/9 and 5/9, 3 % for the noise.
+    np.testing.assert_allclose(shares[:, 0], [4 / 9, 5 / 9, 0, 0], atol=0.03)
+    np.testing.assert_array_equal(shares[:, 1], 0)
+
+
+def test_variance_shares_of_known_sources():
+    rng = np.random.default_rng(1)
+    sources = np.linalg.qr(rng.standard_normal((5000, 2)))[0].T
+    sources -= sources.mean(axis=1, keepdims=True)
+    maps = np.array([[3.0, 0.0], [0.0, 1.0]])
+    shares = variance_shares(maps @ sources, maps, np.linalg.inv(maps))
+    np.testing.assert_allclose(shares, [0.9, 0.1], atol=1e-3)
+
+
+# ----------------------------------------------------------------------------------- verdicts
+
+
+@pytest.mark.parametrize(
+    ("chances", "share", "verdict", "flagged", "reason"),
+    [
+        ({"eye": 0.9}, 0.02, "removed", False, "eye with probability 0.90"),
+        ({"eye": 0.69}, 0.0, "kept", False, "no class to remove is likely enough"),
+        ({"brain": 0.99}, 0.9, "kept", False, "no class to remove is likely enough"),
+        ({"line noise": 0.99}, 0.0, "kept", False, "no class to remove is likely enough"),
+        ({"muscle": 0.85}, 0.3, "kept", True, "muscle with probability 0.85, but carries 30%"),
+        ({"muscle": 0.85}, 0.1, "removed", False, "muscle with probability 0.85"),
+    ],
+)
+def test_verdicts(chances, share, verdict, flagged, reason):
+    (judged,) = judge_components(
+        probabilities_of(**chances)[None], np.array([[0.0, share]]), np.ones(1), ComponentLimits()
+    )
+    assert (judged.verdict, judged.flagged) == (verdict, flagged)
+    assert judged.reason.startswith(reason)
+    assert judged.largest_tag_share == share
+    json.dumps(dataclasses.asdict(judged))
+
+
+def test_correlation_removes_where_its_class_is_removed():
+    arguments = (probabilities_of(other=1.0)[None], np.zeros((1, 1)), np.ones(1))
+    correlations = {"eye": np.array([0.8]), "heart": np.array([0.3])}
+    (judged,) = judge_components(*arguments, ComponentLimits(), correlations)
+    assert judged.verdict == "removed"
+    assert judged.reason == "correlates 0.80 with a channel of the eye"
+    (judged,) = judge_components(*arguments, ComponentLimits(remove={"muscle": 0.8}), correlations)
+    assert judged.verdict == "kept"
