@@ -45,12 +45,16 @@ def judged(raw, ica, separated, settings):
     chosen = settings["components"]
     passband_hz = tagging.passband_end(settings["filter"]["lowpass_hz"], raw.info["sfreq"])
     terms = tagging.study_terms(settings["terms"], passband_hz)
+    harmonics_hz = [
+        [float(term.frequency) for term in terms if term.harmonic and term.tag == tag]
+        for tag, _ in settings["terms"]["tags"]
+    ]
     picked_uv = raw.get_data(picks=list(separated.channel)) * 1e6
     of_data = (picked_uv, separated.maps, separated.unmixing)
     probabilities, notes = components.label_components(raw, ica)
     verdicts = components.judge_components(
         probabilities,
-        components.tag_shares(*of_data, raw.info["sfreq"], [float(t.frequency) for t in terms]),
+        components.tag_shares(*of_data, raw.info["sfreq"], harmonics_hz),
         components.variance_shares(*of_data),
         components.ComponentLimits(chosen["remove"], chosen["max_tag_share"]),
         components.artifact_correlations(raw, separated),

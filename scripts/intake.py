@@ -5,6 +5,7 @@ from onbin.runner import run
 
 
 def intake(inputs, outputs, settings):
+    """Bring a recording to its working rate."""
     recording = settings["recording"]
     raw = dataset.read_recording(settings["folder"], recording, settings["extension"])
     channels = dataset.choose_channels(raw)

@@ -21,7 +21,9 @@ def clean_and_cut(inputs, outputs, settings):
         for row in tables.read_table(inputs.components)
         if row["verdict"] == components.REMOVED
     ]
-    clean = components.remove_components(raw, separated, removed)
+    before_uv = dataset.eeg_uv(raw)
+    clean_uv, gates = components.remove_components(before_uv, separated, removed, float(rate))
+    clean = dataset.with_eeg(raw, clean_uv)
 
     flickering = {name: about["flickering"] for name, about in settings["conditions"].items()}
     chosen = settings["windows"]
@@ -41,7 +43,7 @@ def clean_and_cut(inputs, outputs, settings):
         chosen["skip_s"],
     )
     verdicts = windows.judge_windows(
-        dataset.eeg_uv(clean),
+        clean_uv,
         placed,
         float(rate),
         windows.WindowLimits(peak_to_peak_uv=tuple(chosen["peak_to_peak_uv"])),
@@ -49,9 +51,10 @@ def clean_and_cut(inputs, outputs, settings):
         [float(term.frequency) for term in terms],
     )
     survival = windows_tables.survival_rows(
-        dataset.eeg_uv(raw),
+        before_uv,
         dataset.eeg_names(raw),
-        separated.removal(removed),
+        lambda open_share: separated.removal(removed, open_share),
+        gates,
         [v.window for v in verdicts if v.verdict == windows.KEPT],
         terms,
         samples,

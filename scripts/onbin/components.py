@@ -26,6 +26,9 @@ SAMPLES_PER_WEIGHT = 20
 # Variance, over the largest, below which a direction is but rounding (an earlier reference).
 SMALLEST_EIGENVALUE = 1e-8
 LABEL_SECONDS = 600.0
+# Where a passing artifact is: beyond so many robust sd and so long to each side, with soft edges;
+# it is passing if so much of its power lies there.
+ACTIVE_SD, ACTIVE_MARGIN_S, RAMP_S, PASSING_SHARE = 4.0, 0.25, 0.1, 0.5
 # Segments that tags are looked for in, and their neighbouring bins on each side, past Hann leakage.
 TAG_SEGMENT_S, TAG_NEIGHBOURS = 10.0, (3, 4, 5, 6, 7)
 
@@ -208,21 +211,69 @@ class Separation:
         """No components."""
         return cls(np.empty((len(channels), 0)), np.empty((0, len(channels))), np.array(channels))
 
-    def removal(self, removed: Sequence[int]) -> np.ndarray:
-        """Matrix (n_channels, n_channels) that takes components out of the channels."""
+    def removal(self, removed: Sequence[int], gates: Sequence[float]) -> np.ndarray:
+        """Matrix (n_channels, n_channels) that takes so much of components out of the channels."""
         removed = list(removed)
-        return np.eye(len(self.maps)) - self.maps[:, removed] @ self.unmixing[removed]
+        taken = np.asarray(gates)[:, None] * self.unmixing[removed]
+        return np.eye(len(self.maps)) - self.maps[:, removed] @ taken
 
 
-def remove_components(raw, separation: Separation, removed: Sequence[int]):
-    """Take components out of a copy of a recording."""
-    matrix = separation.removal(removed)
-    return raw.copy().apply_function(
-        lambda data: matrix @ data,
-        picks=list(separation.channel),
-        channel_wise=False,
-        verbose="error",
-    )
+def activity(sources: np.ndarray, rate_hz: float) -> np.ndarray:
+    """Where each artifact is: 0 where its source is quiet, 1 where it is active, smooth between.
+
+    A blink lasts a third of a second. Taking its component out of the seconds between as well
+    would take out whatever brain activity leaks into it, and the response with it; so a component
+    is taken out only where it is active (the thought of Castellanos & Makarov 2006, J Neurosci
+    Methods 158:300, from memory, who kept the small wavelet coefficients of artifact components).
+    Active is beyond 4 robust standard deviations, and 0.25 s to each side. A component whose power
+    is not mostly there is no passing artifact: it is taken out everywhere.
+
+    Parameters
+    ----------
+    sources : ndarray, shape (n_components, n_times)
+    rate_hz : float
+
+    Returns
+    -------
+    ndarray, shape (n_components, n_times)
+    """
+    from scipy.ndimage import maximum_filter1d, uniform_filter1d
+
+    gates = np.ones(sources.shape)
+    margin = 2 * round(ACTIVE_MARGIN_S * rate_hz) + 1
+    ramp = 2 * round(RAMP_S / 2 * rate_hz) + 1
+    for gate, source in zip(gates, sources, strict=True):
+        deviation = np.abs(source - np.median(source))
+        active = deviation > ACTIVE_SD * 1.4826 * np.median(deviation)
+        near = maximum_filter1d(active, margin)
+        if np.sum(source[near] ** 2) > PASSING_SHARE * np.sum(source**2):
+            gate[:] = uniform_filter1d(maximum_filter1d(near, ramp).astype(float), ramp)
+    return gates
+
+
+def remove_components(
+    data_uv: np.ndarray, separation: Separation, removed: Sequence[int], rate_hz: float
+) -> tuple[np.ndarray, np.ndarray]:
+    """Take components out of the channels where they are active.
+
+    Parameters
+    ----------
+    data_uv : ndarray, shape (n_channels, n_times)
+        The channels of the separation.
+    separation : Separation
+    removed : sequence of int
+    rate_hz : float
+
+    Returns
+    -------
+    cleaned_uv : ndarray, shape (n_channels, n_times)
+    gates : ndarray, shape (n_removed, n_times)
+        From `activity`.
+    """
+    removed = list(removed)
+    sources = separation.unmixing[removed] @ data_uv
+    gates = activity(sources, rate_hz)
+    return data_uv - separation.maps[:, removed] @ (gates * sources), gates
 
 
 def label_components(raw, ica) -> tuple[np.ndarray, tuple[str, ...]]:
@@ -323,14 +374,15 @@ def tag_shares(
     maps: np.ndarray,
     unmixing: np.ndarray,
     sfreq_hz: float,
-    frequencies_hz: Sequence[float],
+    harmonics_hz: Sequence[Sequence[float]],
 ) -> np.ndarray:
-    """Share of each term's power that runs through each component.
+    """Share of each tag's power, over its harmonics, that runs through each component.
 
-    A term's power in a component is what stands above the neighbouring bins, on average over
+    A harmonic's power in a component is what stands above the neighbouring bins, on average over
     Hann-tapered segments of 10 s, times the component's summed squared map. What is not clearly
     above its noise (3 standard errors) counts as nothing, so that slow, large components do not
-    seem to carry a tag.
+    seem to carry a tag; and the share is of the tag's power and the standard errors together, so
+    that nothing seems to carry a tag that is hardly there.
 
     Parameters
     ----------
@@ -340,20 +392,22 @@ def tag_shares(
         Of a `Separation`.
     sfreq_hz : float
         Sampling rate.
-    frequencies_hz : sequence of float
-        Terms of the flicker.
+    harmonics_hz : sequence of sequence of float
+        Harmonics of each tag.
 
     Returns
     -------
-    ndarray, shape (n_components, n_terms)
-        Columns sum to 1, or to 0 where no component shows the term.
+    ndarray, shape (n_components, n_tags)
+        Columns sum to nearly 1 for a clear tag, and to 0 where no component shows it.
     """
     n_segment = min(round(TAG_SEGMENT_S * sfreq_hz), data_uv.shape[1])
     n_segments = data_uv.shape[1] // n_segment
     bin_hz = sfreq_hz / n_segment
     taper = 0.5 - 0.5 * np.cos(2 * np.pi * np.arange(n_segment) / n_segment)
-    terms_hz = np.asarray(frequencies_hz, dtype=float)
-    shares = np.zeros((maps.shape[1], terms_hz.size))
+    tag_of = np.repeat(np.arange(len(harmonics_hz)), [len(h) for h in harmonics_hz])
+    terms_hz = np.array([f for h in harmonics_hz for f in h], dtype=float)
+    weight = (maps**2).sum(axis=0)
+    carried, uncertain = np.zeros((2, maps.shape[1], len(harmonics_hz)))
     steps = np.array([0, *TAG_NEIGHBOURS, *(-step for step in TAG_NEIGHBOURS)])
     for term, term_hz in enumerate(terms_hz):
         bins_hz = term_hz + steps * bin_hz
@@ -366,12 +420,11 @@ def tag_shares(
             segment = data_uv[:, index * n_segment : (index + 1) * n_segment]
             power += np.abs(unmixing @ (segment @ kernel)) ** 2 / n_segments
         noise = power[:, 1:].mean(axis=1)
+        error = noise / np.sqrt(n_segments)
         excess = power[:, 0] - noise
-        excess[excess < 3 * noise / np.sqrt(n_segments)] = 0.0
-        projected = excess * (maps**2).sum(axis=0)
-        if projected.sum() > 0:
-            shares[:, term] = projected / projected.sum()
-    return shares
+        carried[:, tag_of[term]] += np.where(excess > 3 * error, excess, 0.0) * weight
+        uncertain[:, tag_of[term]] += error * weight
+    return carried / (carried + uncertain).sum(axis=0)
 
 
 def judge_components(
@@ -387,7 +440,7 @@ def judge_components(
     ----------
     probabilities : ndarray, shape (n_components, 7)
         From `label_components`.
-    shares : ndarray, shape (n_components, n_terms)
+    shares : ndarray, shape (n_components, n_tags)
         From `tag_shares`.
     variance : ndarray, shape (n_components,)
         From `variance_shares`.

@@ -232,6 +232,14 @@ def write_signal(raw, path: str | Path) -> None:
     raw.save(path, fmt="single", overwrite=True, verbose="error")
 
 
+def with_eeg(raw, eeg_uv: np.ndarray):
+    """Copy of a Raw with another EEG, in µV."""
+    copy = raw.copy()
+    picks = [copy.ch_names.index(name) for name in eeg_names(copy)]
+    copy._data[picks] = eeg_uv * 1e-6
+    return copy
+
+
 def eeg_uv(raw) -> np.ndarray:
     """EEG of a Raw in µV, shape (n_channels, n_times)."""
     return raw.get_data(picks="eeg") * 1e6

@@ -223,7 +223,9 @@ def p_value(p: float | None) -> str:
 
 def decibel(value: float | None) -> str:
     """Write a level in dB."""
-    return "n/a" if value is None or not math.isfinite(value) else f"{value:.1f}".replace("-", "−")
+    if value is None or not math.isfinite(value):
+        return "n/a"
+    return f"{round(value, 1) + 0:.1f}".replace("-", "−")
 
 
 def plain(value: float | Fraction) -> str:
@@ -366,6 +368,7 @@ def facts(material: Material) -> dict[str, Any]:
         "recordings": recordings,
         "survival": report_tables.survival(material),
         "groups": report_tables.response_groups(material),
+        "unmeasured": report_tables.unmeasured(material),
         "unlocked": [n for n, about in material.conditions.items() if not about["phase_locked"]],
         "alpha": report_tables.alpha_people(material),
         "relation": material.group,

@@ -157,7 +157,7 @@ def read(inputs: SimpleNamespace, settings: Mapping[str, Any]) -> Material:
         recordings=recordings,
         plans=plans,
         amplitudes_uv=amplitudes_uv,
-        spectra=spectra,
+        spectra=sorted(spectra, key=lambda s: list(settings["conditions"]).index(s.condition)),
         info=mne.io.read_info(inputs.signal, verbose="error"),
     )
 
@@ -387,7 +387,19 @@ def response_rows(material: Material) -> list[dict[str, Any]]:
             if np.isnan(row["amplitude_uv"]):
                 shown["amplitude_uv"] = np.sqrt(row["total_power_uv2"])
             chosen.append(shown)
-    return chosen
+    order = list(material.conditions)
+    return sorted(chosen, key=lambda row: order.index(row["condition"]))
+
+
+def unmeasured(material: Material) -> list[dict[str, Any]]:
+    """Who has too few windows in a condition for a response, and how many were kept."""
+    measured = {(row["participant"], row["condition"]) for row in material.responses}
+    return [
+        {"participant": person.participant, "condition": condition, "kept": kept}
+        for person in quality(material)
+        for condition, (kept, _) in person.windows.items()
+        if material.tags and (person.participant, condition) not in measured
+    ]
 
 
 def response_groups(material: Material) -> dict[str, list[dict[str, Any]]]:

@@ -174,17 +174,19 @@ def judge_channels(
         reasons["deviating amplitude"] = deviating & ~noisy
     if trusted().size >= FEWEST_TO_COMPARE:
         slow_uv, rate_hz = _slow_signal(data_uv, common_uv, sfreq_hz)
-        correlations = _partner_correlation(slow_uv, rate_hz, trusted())
-        figures["uncorrelated_share"] = (correlations < limits.correlation).mean(axis=0)
+        apart = _partner_correlation(slow_uv, rate_hz, trusted()) < limits.correlation
+        figures["uncorrelated_share"] = _share_of_telling(apart, trusted())
         reasons["uncorrelated"] = figures["uncorrelated_share"] > limits.uncorrelated_share
         placed = np.isfinite(positions_m).all(axis=1)
         predictors = trusted()[placed[trusted()]]
         if predictors.size >= FEWEST_TO_PREDICT:
             share = np.full(len(names), np.nan)
-            share[placed] = (
-                _prediction_correlation(slow_uv, rate_hz, positions_m, placed, predictors, seed)
-                < limits.prediction
-            ).mean(axis=0)
+            correlations = _prediction_correlation(
+                slow_uv, rate_hz, positions_m, placed, predictors, seed
+            )
+            apart = np.zeros((len(correlations), len(names)), dtype=bool)
+            apart[:, placed] = correlations < limits.prediction
+            share[placed] = _share_of_telling(apart, predictors)[placed]
             figures["unpredicted_share"] = share
             reasons["unpredicted"] = share > limits.unpredicted_share
 
@@ -212,6 +214,15 @@ def judge_channels(
             )
         )
     return verdicts
+
+
+def _share_of_telling(apart: np.ndarray, trusted: np.ndarray) -> np.ndarray:
+    """Share of windows in which each channel is apart from the others, shape (n_channels,).
+
+    A window in which most channels are is one of movement: it tells nothing of any channel.
+    """
+    telling = apart[:, trusted].mean(axis=1) <= 0.5
+    return apart[telling].mean(axis=0) if telling.any() else np.zeros(apart.shape[1])
 
 
 def _robust_amplitude(data_uv: np.ndarray) -> np.ndarray:
@@ -498,3 +509,37 @@ def interpolate_and_reference(
         raw.set_eeg_reference(reference, verbose="error")
     rank = len(locations_m) - len(bad) - (reference is not None)
     return Referenced(raw, interpolated, left_out, rank)
+
+
+def cleaning_matrix(
+    raw,
+    bad: Sequence[str],
+    reference: str | Sequence[str] | None,
+) -> tuple[np.ndarray, list[str]]:
+    """Write interpolation and reference as one matrix, channels by channels.
+
+    Unit impulses, one channel after another, go through them. The removal of components is a
+    matrix of its own, which comes after this one.
+
+    Parameters
+    ----------
+    raw : mne.io.Raw
+        The recording before interpolation; only its EEG channels and their positions are used.
+    bad : sequence of str
+        Interpolated channels.
+    reference : "average", list of str or None
+        As in `interpolate_and_reference`.
+
+    Returns
+    -------
+    matrix : ndarray, shape (n_channels_after, n_channels_before)
+        The chain.
+    names : list of str
+        Channels after it, the rows.
+    """
+    import mne
+
+    info = mne.pick_info(raw.info, mne.pick_types(raw.info, eeg=True, exclude=[]))
+    impulses = mne.io.RawArray(np.eye(len(info.ch_names)), info, verbose="error")
+    cleaned = interpolate_and_reference(impulses, bad, reference).raw
+    return cleaned.get_data(), list(cleaned.ch_names)

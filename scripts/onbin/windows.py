@@ -5,9 +5,6 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from onbin.components import Separation
-from onbin.sensors import interpolate_and_reference
-
 KEPT, LEFT_OUT = "kept", "left out"
 
 
@@ -267,50 +264,6 @@ def _figures(
     }
 
 
-def cleaning_matrix(
-    raw,
-    bad: Sequence[str],
-    reference: str | Sequence[str] | None,
-    separation: Separation | None = None,
-    removed: Sequence[int] = (),
-) -> tuple[np.ndarray, list[str]]:
-    """Write the fitted cleaning chain after the filters as one matrix, channels by channels.
-
-    Unit impulses, one channel after another, go through interpolation and reference; the removal
-    of components follows.
-
-    Parameters
-    ----------
-    raw : mne.io.Raw
-        The recording before interpolation; only its EEG channels and their positions are used.
-    bad : sequence of str
-        Interpolated channels.
-    reference : "average", list of str or None
-        As in `sensors.interpolate_and_reference`.
-    separation : components.Separation, optional
-        Fitted components.
-    removed : sequence of int
-        Components taken out.
-
-    Returns
-    -------
-    matrix : ndarray, shape (n_channels_after, n_channels_before)
-        The chain.
-    names : list of str
-        Channels after it, the rows.
-    """
-    import mne
-
-    info = mne.pick_info(raw.info, mne.pick_types(raw.info, eeg=True, exclude=[]))
-    impulses = mne.io.RawArray(np.eye(len(info.ch_names)), info, verbose="error")
-    cleaned = interpolate_and_reference(impulses, bad, reference).raw
-    matrix = cleaned.get_data()
-    if separation is not None:
-        rows = [cleaned.ch_names.index(name) for name in separation.channel]
-        matrix[rows] = separation.removal(removed) @ matrix[rows]
-    return matrix, list(cleaned.ch_names)
-
-
 def chain_gain(
     cleaning: np.ndarray, baseline: np.ndarray, topographies: np.ndarray
 ) -> list[ResponseSurvival]:
@@ -319,7 +272,7 @@ def chain_gain(
     Parameters
     ----------
     cleaning : ndarray, shape (n_after, n_before)
-        The whole chain, from `cleaning_matrix`.
+        The whole chain.
     baseline : ndarray, shape (n_after, n_before)
         The chain to compare with: the same reference, without what is to be judged.
     topographies : ndarray, shape (n_topographies, n_before)

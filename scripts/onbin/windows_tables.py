@@ -1,6 +1,6 @@
 """From verdicts on windows to rows, and how long the windows of each condition are."""
 
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from fractions import Fraction
 from typing import Any
 
@@ -80,7 +80,8 @@ def verdict_rows(
 def survival_rows(
     signal_uv: np.ndarray,
     names: Sequence[str],
-    removal: np.ndarray,
+    removal: Callable[[np.ndarray], np.ndarray],
+    gates: np.ndarray,
     kept: Sequence[Window],
     terms: Sequence[Term],
     samples: Mapping[Term, int],
@@ -94,7 +95,10 @@ def survival_rows(
     signal_uv : ndarray, shape (n_channels, n_times)
         Before the removal.
     names : sequence of str
-    removal : ndarray, shape (n_channels, n_channels)
+    removal : callable
+        From the share of time in which each removed component is taken out to the matrix of it.
+    gates : ndarray, shape (n_removed, n_times)
+        Where it is taken out.
     kept : sequence of Window
     terms : sequence of Term
     samples : mapping of Term to int
@@ -117,7 +121,14 @@ def survival_rows(
             np.array([0]),
         )
         topography = coefficients[:, :, 0, 0].mean(axis=0)
-        (survival,) = chain_gain(removal, np.eye(len(names)), topography)
+        open_share = np.mean(
+            [
+                gates[:, w.start_sample : w.start_sample + samples[term]].mean(axis=1)
+                for w in chosen
+            ],
+            axis=0,
+        )
+        (survival,) = chain_gain(removal(open_share), np.eye(len(names)), topography)
         yield {
             "tag": term.tag,
             "term": term.term,
