@@ -33,7 +33,8 @@ rule study:
         settings=settings_part(
             "sensors.max_bad_share",
             "trust",
-            "comparisons",
+            "conditions.*.flickering",
+            "planned",
             "seed",
             recordings=[recording.name for recording in RECORDINGS],
             participants={who: recordings_of(who) for who in PARTICIPANTS},

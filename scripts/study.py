@@ -26,12 +26,16 @@ def make_study(inputs, outputs, settings):
             ("windows", inputs.windows),
         )
     }
+    fewest = {
+        name: settings["trust"]["min_windows" if about["flickering"] else "min_rest_windows"]
+        for name, about in settings["conditions"].items()
+    }
     participants = [
         study_tables.participant_row(
             participant,
             **{name: {r: of_all[r] for r in recordings} for name, of_all in verdicts.items()},
             max_bad_share=settings["sensors"]["max_bad_share"],
-            min_windows=settings["trust"]["min_windows"],
+            min_windows=fewest,
         )
         for participant, recordings in settings["participants"].items()
     ]
@@ -51,7 +55,7 @@ def make_study(inputs, outputs, settings):
         participant, *others = tables.header(first)
         tables.write_table(path, marked, [participant, "in_study", *others])
     comparisons = study_tables.comparison_rows(
-        settings["comparisons"], responses, alphas, _people(inputs), in_study, settings["seed"]
+        settings["planned"], responses, alphas, _people(inputs), in_study, settings["seed"]
     )
     tables.write_table(outputs.comparisons, comparisons, COMPARISONS)
     group = study_tables.group_rows(relations, windows, in_study, settings["seed"])

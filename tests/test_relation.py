@@ -24,13 +24,13 @@ def related(rng, slope):
 
 def test_relation_within_conditions():
     alpha, amplitude = related(np.random.default_rng(1), -1)
-    found = window_relation(alpha, amplitude, CONDITION, NUMBER, seed=0)
+    found = window_relation(alpha, amplitude, CONDITION, NUMBER, NUMBER, seed=0)
     # Pearson's r is −1/√2 here, Spearman's (6/π)·asin(r/2) = −0.69; standard error about 0.08.
     np.testing.assert_allclose(found.rho, -0.69, atol=0.25)
     np.testing.assert_allclose(found.partial_rho, found.rho, atol=0.1)
     assert found.p == 1 / 2001
     assert (found.n_windows, found.n_left_out, found.reason) == (60, 0, "")
-    assert found == window_relation(alpha, amplitude, CONDITION, NUMBER, seed=0)
+    assert found == window_relation(alpha, amplitude, CONDITION, NUMBER, NUMBER, seed=0)
 
 
 def test_a_difference_between_conditions_is_no_relation():
@@ -42,7 +42,25 @@ def test_a_difference_between_conditions_is_no_relation():
     p = []
     for seed in range(400):
         alpha, amplitude = rng.normal(size=(2, 60)) * np.where(few, 10, 1) + 30 * few
-        found = window_relation(alpha, amplitude, condition, NUMBER, seed, n_permutations=199)
+        found = window_relation(
+            alpha, amplitude, condition, NUMBER, NUMBER, seed, n_permutations=199
+        )
+        p.append(found.p)
+    # 0.05 is reached exactly with 199 permutations; four binomial standard errors are 0.044.
+    np.testing.assert_allclose(np.mean(np.array(p) <= 0.05), 0.05, atol=0.044)
+
+
+def test_windows_of_one_trial_count_as_alike():
+    # Alpha and amplitude have a level for each trial, unrelated to each other: with single windows
+    # permuted, far more than 5 % of p values would be small.
+    rng = np.random.default_rng(6)
+    trial = np.repeat(np.arange(20), 3)
+    p = []
+    for seed in range(400):
+        alpha, amplitude = rng.normal(size=(2, 20)).repeat(3, axis=1) + rng.normal(size=(2, 60)) / 2
+        found = window_relation(
+            alpha, amplitude, ["all"] * 60, trial, NUMBER, seed, n_permutations=199
+        )
         p.append(found.p)
     # 0.05 is reached exactly with 199 permutations; four binomial standard errors are 0.044.
     np.testing.assert_allclose(np.mean(np.array(p) <= 0.05), 0.05, atol=0.044)
@@ -52,7 +70,7 @@ def test_shared_drift_shows_in_the_partial_relation():
     rng = np.random.default_rng(3)
     number = np.arange(200)
     alpha, amplitude = 0.02 * number + rng.normal(size=(2, 200))
-    found = window_relation(alpha, amplitude, ["all"] * 200, number, seed=0)
+    found = window_relation(alpha, amplitude, ["all"] * 200, number, number, seed=0)
     assert found.rho > 0.4
     # Standard error of a null correlation of 200 is 0.07.
     assert abs(found.partial_rho) < 0.25
@@ -61,11 +79,12 @@ def test_shared_drift_shows_in_the_partial_relation():
 def test_windows_that_cannot_take_part_are_counted():
     rng = np.random.default_rng(4)
     alpha, amplitude = related(rng, 1)
-    whole = window_relation(alpha, amplitude, CONDITION, NUMBER, seed=0)
+    whole = window_relation(alpha, amplitude, CONDITION, NUMBER, NUMBER, seed=0)
     found = window_relation(
         np.r_[alpha, np.nan, 1, 1],
         np.r_[amplitude, 1, np.nan, 1],
         [*CONDITION, "low", "low", "alone"],
+        np.r_[NUMBER, 60, 61, 62],
         np.r_[NUMBER, 60, 61, 62],
         seed=0,
     )
@@ -74,21 +93,21 @@ def test_windows_that_cannot_take_part_are_counted():
 
 
 def test_too_little_gives_a_reason():
-    few = window_relation(np.arange(7), np.arange(7), ["a"] * 7, np.arange(7), seed=0)
+    few = window_relation(np.arange(7), np.arange(7), ["a"] * 7, np.arange(7), np.arange(7), seed=0)
     assert np.isnan([few.rho, few.partial_rho, few.p]).all()
     assert few.reason == "7 windows of at least 8"
     # A level for each condition, which is no exact binary number, is no variation.
     constant = np.where(CONDITION == "high", 0.1, 0.7)
-    flat = window_relation(constant, np.arange(60), CONDITION, NUMBER, seed=0)
+    flat = window_relation(constant, np.arange(60), CONDITION, NUMBER, NUMBER, seed=0)
     assert np.isnan(flat.rho)
     assert "does not vary" in flat.reason
     alpha, amplitude = related(np.random.default_rng(5), 1)
-    timeless = window_relation(alpha, amplitude, CONDITION, np.zeros(60), seed=0)
+    timeless = window_relation(alpha, amplitude, CONDITION, NUMBER, np.zeros(60), seed=0)
     assert np.isfinite(timeless.rho)
     assert np.isnan(timeless.partial_rho)
     assert "time on task" in timeless.reason
     with pytest.raises(DataError, match="one value a window"):
-        window_relation(alpha, amplitude[:-1], CONDITION, NUMBER, seed=0)
+        window_relation(alpha, amplitude[:-1], CONDITION, NUMBER, NUMBER, seed=0)
 
 
 def test_group_of_people():

@@ -482,7 +482,7 @@ def test_cautions_on_the_page(usual):
     ("changes", "told"),
     [
         ({"settings": study_settings(**WITHOUT_TAGS)}, ["the settings name no flicker"]),
-        ({"people": 1}, ["too few people for an interval"]),
+        ({"people": 1}, ["in one person: too few for an interval or a test"]),
         ({"people": 2, "bad": [0, 1]}, ["Nobody is in the study.", "none. Set aside (2)"]),
         (
             {"settings": study_settings(comparisons={}), "channels": 3},

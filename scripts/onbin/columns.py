@@ -230,7 +230,7 @@ COLUMNS = {
         null="mean 0",
     ),
     "rho_partial": Column("The same with the window's number (time on task) held constant."),
-    "rho_p": Column("p by permuting windows within conditions.", null="uniform"),
+    "rho_p": Column("p by permuting whole trials within conditions.", null="uniform"),
     "attended": Column("Whether the tag is the attended one.", kind="boolean"),
     "rho_mean": Column("Mean over people of rho, by Fisher's z."),
     "rho_low": Column("Lower end of its 95 % BCa bootstrap interval."),

@@ -318,7 +318,7 @@ def label_components(raw, ica) -> tuple[np.ndarray, tuple[str, ...]]:
     if ica.method == "fastica":
         notes.append("fitted by FastICA, ICLabel was trained on extended infomax")
     copy = mne.io.RawArray(data_uv * 1e-6, _info_at(raw.info, picks, sfreq_hz), verbose="error")
-    with warnings.catch_warnings():
+    with warnings.catch_warnings(), mne.use_log_level("error"):
         warnings.simplefilter("ignore")  # the notes say the same
         probabilities = iclabel_label_components(copy, ica, inplace=False, backend="onnx")
     return np.asarray(probabilities, dtype=float), tuple(notes)

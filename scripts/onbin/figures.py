@@ -100,10 +100,9 @@ def save(figure: Any, path: str | Path) -> None:
 def _styled(draw: Callable[..., Any]) -> Callable[..., Any]:
     @wraps(draw)
     def styled(*args: Any, **named: Any) -> Any:
-        import matplotlib
+        from matplotlib import rc_context
 
-        matplotlib.use("Agg")
-        with matplotlib.rc_context(STYLE):
+        with rc_context(STYLE | {"backend": "agg"}):
             return draw(*args, **named)
 
     return styled
@@ -273,14 +272,13 @@ def responses(rows: Sequence[Mapping[str, Any]]) -> Any:
         ``tag``, ``condition``, ``role``, ``participant``, ``in_study``, ``amplitude_uv``,
         ``amplitude_low_uv``, ``amplitude_high_uv`` (the last two NaN where there is none).
     """
-    tags, conditions, people = (
-        list(dict.fromkeys(row[name] for row in rows))
-        for name in ("tag", "condition", "participant")
-    )
+    tags = list(dict.fromkeys(row["tag"] for row in rows))
+    conditions = list(dict.fromkeys(row["condition"] for row in rows))
+    people = sorted({row["participant"] for row in rows})
     figure = _figure(max(WIDTH_IN, 1.8 * len(conditions)), 0.9 + 2.4 * len(tags))
     grid = figure.subplots(len(tags), 1, sharex=True, squeeze=False)[:, 0]
     spread = np.linspace(-0.36, 0.36, len(people)) if len(people) > 1 else np.zeros(1)
-    size = 5 if len(people) <= 20 else 3.2
+    size = 5 if len(people) <= 20 else 3
     for tag, axes in zip(tags, grid, strict=True):
         for index, condition in enumerate(conditions):
             cell = [r for r in rows if r["tag"] == tag and r["condition"] == condition]
@@ -426,11 +424,10 @@ def relation(
         if used:
             x = index + np.array([-0.2, 0.2])
             right.plot(x, np.mean(used, axis=0), color=INK, linewidth=2.2)
+        right.text(index, 1.01, words(tag), transform=right.get_xaxis_transform(), ha="center")
     right.axhline(0, color=MUTED, linewidth=0.6)
     places = [index + shift for index in range(len(own)) for shift in (-0.2, 0.2)]
     right.set_xticks(places, ["little\nalpha", "much\nalpha"] * len(own))
-    for index, tag in enumerate(own):
-        right.text(index, 1.01, words(tag), transform=right.get_xaxis_transform(), ha="center")
     right.set_ylabel("response in a window (µV)")
     return figure
 

@@ -40,7 +40,7 @@ class WindowRelation:
     partial_rho : float
         The same with the window number, that is time on task, held constant.
     p : float
-        Two-sided, of rho, from permutations of the windows within conditions.
+        Two-sided, of rho, from permutations of the trials within conditions.
     n_windows, n_left_out : int
         Windows used, and those that miss a value or stand alone in their condition.
     reason : str
@@ -90,6 +90,7 @@ def window_relation(
     log_alpha: np.ndarray,
     amplitude_uv: np.ndarray,
     condition: Sequence[str],
+    trial: Sequence,
     window_number: np.ndarray,
     seed: int,
     n_permutations: int = PERMUTATIONS,
@@ -106,6 +107,8 @@ def window_relation(
     amplitude_uv : array_like, shape (n_windows,)
         Single-window amplitude, projected on the response's phase; may be negative.
     condition : sequence of str, shape (n_windows,)
+    trial : sequence, shape (n_windows,)
+        Which windows belong to one trial.
     window_number : array_like, shape (n_windows,)
         Place in the recording.
     seed : int
@@ -118,21 +121,23 @@ def window_relation(
 
     Notes
     -----
-    The permutations take windows of a condition as exchangeable. A drift that alpha and response
+    Windows of one trial are alike, so trials are permuted, not windows: the responses of a trial go
+    with the alpha of another one of the same condition and number of windows. A drift that alpha and response
     share over the recording makes rho and its p large: partial_rho tells.
     """
     _check_lengths(
         log_alpha=log_alpha,
         amplitude_uv=amplitude_uv,
         condition=condition,
+        trial=trial,
         window_number=window_number,
     )
-    label = np.asarray(condition)
+    label, trial = np.asarray(condition), np.asarray(trial)
     columns = np.array([log_alpha, amplitude_uv, window_number], dtype=float)
     kept = np.isfinite(columns).all(axis=0)
     names, count = np.unique(label[kept], return_counts=True)
     kept &= np.isin(label, names[count > 1])
-    label, columns = label[kept], columns[:, kept]
+    label, trial, columns = label[kept], trial[kept], columns[:, kept]
     n_windows, n_left_out = int(kept.sum()), int((~kept).sum())
     if n_windows < MIN_WINDOWS:
         reason = f"{n_windows} windows of at least {MIN_WINDOWS}"
@@ -144,7 +149,7 @@ def window_relation(
         reason = "alpha or the response does not vary within conditions"
         return WindowRelation(np.nan, np.nan, np.nan, n_windows, n_left_out, reason)
     partial_rho = float(partial_spearman(alpha, amplitude, number))
-    order = _permutations_within(label, n_permutations, seed)
+    order = _permuted_trials(label, trial, n_permutations, seed)
     permuted = pearson(ranks(alpha), ranks(amplitude)[order])
     extreme = int((np.abs(permuted) >= abs(rho) - SAME).sum())
     return WindowRelation(
@@ -157,13 +162,23 @@ def window_relation(
     )
 
 
-def _permutations_within(label: np.ndarray, n_permutations: int, seed: int) -> np.ndarray:
-    """Orders of the windows, shape (n_permutations, n_windows), each window in its condition."""
+def _permuted_trials(
+    label: np.ndarray, trial: np.ndarray, n_permutations: int, seed: int
+) -> np.ndarray:
+    """Orders of the windows, shape (n_permutations, n_windows): whole trials change places.
+
+    Only trials of the same condition and number of windows do.
+    """
     rng = np.random.default_rng(seed)
+    alike: dict[tuple, list[np.ndarray]] = {}
+    for name, number in sorted(set(zip(label.tolist(), trial.tolist(), strict=True))):
+        places = np.flatnonzero((label == name) & (trial == number))
+        alike.setdefault((name, places.size), []).append(places)
     order = np.empty((n_permutations, label.size), dtype=int)
-    for name in np.unique(label):
-        places = np.flatnonzero(label == name)
-        order[:, places] = rng.permuted(np.tile(places, (n_permutations, 1)), axis=1)
+    for trials in alike.values():
+        places = np.stack(trials)
+        draws = rng.permuted(np.tile(np.arange(len(places)), (n_permutations, 1)), axis=1)
+        order[:, places.ravel()] = places[draws].reshape(n_permutations, -1)
     return order
 
 

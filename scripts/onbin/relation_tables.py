@@ -56,6 +56,7 @@ def relation_rows(
             [row["log_alpha"] for row in rows],
             [row["projected_amplitude_uv"] for row in rows],
             [f"{row['condition']} {row['tag']}" for row in rows],
+            [f"{row['recording']} {row['trial']}" for row in rows],
             [row["window_number"] for row in rows],
             seed=seed,
             n_permutations=permutations,

@@ -269,6 +269,8 @@ def _sentence(row: Mapping[str, Any], comparison: Mapping[str, Any]) -> str:
         said += f" is {number(abs(estimate))}{unit} {side} for {plus} than for {minus}"
     else:
         said += f" for {plus} is {number(estimate)}{unit}"
+    if row["n"] < 2:
+        return f"{said[0].upper()}{said[1:]} in one person: too few for an interval or a test."
     low, high = row["estimate_low"], row["estimate_high"]
     interval, zero = "too few people for an interval", ""
     if math.isfinite(low) and math.isfinite(high):
@@ -404,7 +406,7 @@ def methods(material: Material) -> dict[str, Any]:
         for name in material.conditions
     }
     return {
-        "plan": plan,
+        "rates": sorted({plan.rate for plan in material.plans.values()}),
         "filters": chain.designs,
         "line_hz": chain.line_hz,
         "positions": sorted(
@@ -425,8 +427,8 @@ def spread(counts: Iterable[int]) -> str:
     'mean 3.00, range 1–6'
     """
     values = list(counts)
-    if not values:
-        return "nobody"
+    if len(set(values)) < 2:
+        return f"{values[0]} each" if values else "nobody"
     return f"mean {number(np.mean(values))}, range {min(values)}–{max(values)}"
 
 
@@ -439,4 +441,4 @@ def settings_text(settings: Mapping[str, Any]) -> str:
 
     whole = {name: value for name, value in settings.items() if name != "terms"}
     whole["tags"] = {tag: settings["tags"][tag] for tag, _ in settings["terms"]["tags"]}
-    return yaml.safe_dump(whole, sort_keys=False, allow_unicode=True, width=100)
+    return yaml.safe_dump(whole, sort_keys=False, allow_unicode=True, default_flow_style=None)

@@ -168,8 +168,9 @@ class Windows(Part):
         0.5, description="Time left out after each onset: the transient response."
     )
     peak_to_peak_uv: Interval = Field(
-        [50.0, 300.0],
-        description="Lower and upper bound of the data-driven peak-to-peak limit, in µV.",
+        [150.0, 400.0],
+        description="Bounds of the limit for a window's peak-to-peak amplitude, in µV; between "
+        "them it is taken from the windows of the recording's condition.",
     )
 
 
@@ -229,7 +230,10 @@ class Trust(Part):
     """When data that can be read is not trusted."""
 
     min_windows: Count = Field(
-        10, description="A person with fewer kept windows in a condition is set aside."
+        10, description="A person with fewer kept windows in a flicker condition is set aside."
+    )
+    min_rest_windows: Count = Field(
+        3, description="The same where nothing flickers: windows are longer there and fewer."
     )
 
 
@@ -376,7 +380,8 @@ def part(settings: Settings, *names: str) -> dict[str, Any]:
     settings : Settings
     names : str
         Such as ``filter``, ``alpha.segment_s`` or ``conditions.*.flickering``, where ``*`` stands
-        for every name; and ``terms`` for all that makes up the terms.
+        for every name; ``terms`` for all that makes up the terms; ``planned`` for the list of
+        comparisons.
     """
     whole = plain(settings)
     whole["terms"] = {
@@ -384,6 +389,9 @@ def part(settings: Settings, *names: str) -> dict[str, Any]:
         "harmonics": settings.response.harmonics,
         "intermodulation_order": settings.response.intermodulation_order,
     }
+    whole["planned"] = [  # in the order of the settings, which mapping keys lose
+        {"name": name, **whole["comparisons"][name]} for name in settings.comparisons
+    ]
     picked: dict[str, Any] = {}
     for name in names:
         _pick(whole, name.split("."), picked)

@@ -20,7 +20,7 @@ def participant_row(
     components: Mapping[str, Rows],
     windows: Mapping[str, Rows],
     max_bad_share: float,
-    min_windows: int,
+    min_windows: Mapping[str, int],
 ) -> dict[str, Any]:
     """What became of one participant's recordings, and whether the study rests on them.
 
@@ -31,8 +31,8 @@ def participant_row(
         Tables of verdicts by recording.
     max_bad_share : float
         Share of bad channels above which a participant is set aside.
-    min_windows : int
-        Fewest windows of each condition that was recorded.
+    min_windows : mapping
+        Fewest windows of each condition, where it was recorded.
     """
     kept: dict[str, int] = {}
     for rows in windows.values():
@@ -45,9 +45,9 @@ def participant_row(
         if bad[name] > max_bad_share * len(rows)
     ]
     reasons += [
-        f"{condition}: {count} windows kept, fewer than {min_windows}"
+        f"{condition}: {count} windows kept, fewer than {min_windows[condition]}"
         for condition, count in kept.items()
-        if count < min_windows
+        if count < min_windows[condition]
     ]
     fewest = min(kept, key=kept.get, default=None)
     return {
@@ -68,7 +68,7 @@ def participant_row(
 
 
 def comparison_rows(
-    comparisons: Mapping[str, Mapping[str, Any]],
+    comparisons: Sequence[Mapping[str, Any]],
     responses: Rows,
     alphas: Rows,
     people: Mapping[str, Mapping[str, str]],
@@ -79,8 +79,8 @@ def comparison_rows(
 
     Parameters
     ----------
-    comparisons : mapping
-        From the settings, by name.
+    comparisons : sequence of mapping
+        From the settings, with their names.
     responses, alphas : rows
         Of all participants.
     people : mapping
@@ -90,7 +90,7 @@ def comparison_rows(
     seed : int
     """
     rows = []
-    for name, comparison in comparisons.items():
+    for comparison in comparisons:
         table = alphas if comparison["measure"].startswith("alpha") else responses
         values = {
             who: difference
@@ -99,12 +99,12 @@ def comparison_rows(
         }
         rows.append(
             {
-                "comparison": name,
+                "comparison": comparison["name"],
                 "measure": comparison["measure"],
                 "site": comparison["region"],
                 "plus": _words(comparison["plus"]),
                 "minus": _words(comparison["minus"]) or "zero",
-                **_tested(name, comparison, values, people, seed),
+                **_tested(comparison, values, people, seed),
             }
         )
     corrected = inference.holm(np.array([row["p"] for row in rows])) if rows else []
@@ -141,16 +141,16 @@ def _words(cells: Sequence[Mapping[str, Any]]) -> str:
 
 
 def _tested(
-    name: str,
     comparison: Mapping[str, Any],
     values: Mapping[str, float],
     people: Mapping[str, Mapping[str, str]],
     seed: int,
 ) -> dict[str, Any]:
+    key = f"comparisons.{comparison['name']}"
     unit = COLUMNS[comparison["measure"]].unit
     if comparison["covariate"]:
         column = comparison["covariate"]
-        labels = _column(people, values, column, f"comparisons.{name}.covariate")
+        labels = _column(people, values, column, f"{key}.covariate")
         known = {who: float(labels[who]) for who in values if _is_number(labels[who])}
         x, y = np.array(list(known.values())), np.array([values[who] for who in known])
         test = inference.spearman_test(x, y, seed)
@@ -159,7 +159,7 @@ def _tested(
         estimate = test.statistic
     elif comparison["groups"]:
         column, first_label, second_label = comparison["groups"]
-        labels = _column(people, values, column, f"comparisons.{name}.groups")
+        labels = _column(people, values, column, f"{key}.groups")
         first, second = (
             np.array([values[who] for who in values if labels[who] == label])
             for label in (first_label, second_label)

@@ -48,8 +48,8 @@ class Unplaced:
 class WindowLimits:
     """What a window may show at most.
 
-    A recording's own limit is ``median + mad_factor * 1.4826 * MAD`` of the figure over its
-    windows, held within the absolute bounds given here (lowest limit, highest limit). The factor
+    A condition's own limit is ``median + mad_factor * 1.4826 * MAD`` of the figure over its
+    windows, since strong alpha with closed eyes is no artifact, held within the absolute bounds given here (lowest limit, highest limit). The factor
     and the bounds are common practice.
 
     Attributes
@@ -69,9 +69,9 @@ class WindowLimits:
     """
 
     mad_factor: float = 5.0
-    peak_to_peak_uv: tuple[float, float] = (100.0, 300.0)
-    gradient_uv_per_ms: tuple[float, float] = (5.0, 50.0)
-    muscle_uv: tuple[float, float] = (5.0, 30.0)
+    peak_to_peak_uv: tuple[float, float] = (150.0, 400.0)
+    gradient_uv_per_ms: tuple[float, float] = (10.0, 50.0)
+    muscle_uv: tuple[float, float] = (8.0, 30.0)
     muscle_from_hz: float = 30.0
     flat_uv: float = 0.5
 
@@ -204,17 +204,12 @@ def judge_windows(
     if not windows:
         return []
     figures = [_figures(data_uv, window, sfreq_hz, limits, terms_hz) for window in windows]
-    bounds = {
-        "peak_to_peak_uv": limits.peak_to_peak_uv,
-        "gradient_uv_per_ms": limits.gradient_uv_per_ms,
-        "muscle_uv": limits.muscle_uv,
+    used = {
+        condition: _limits_of(
+            [f for f, w in zip(figures, windows, strict=True) if w.condition == condition], limits
+        )
+        for condition in {window.condition for window in windows}
     }
-    used = {"flat_uv": limits.flat_uv}
-    for name, (lowest, highest) in bounds.items():
-        values = np.array([figure[name] for figure in figures])
-        median = np.median(values)
-        deviation = 1.4826 * np.median(np.abs(values - median))
-        used[name] = float(np.clip(median + limits.mad_factor * deviation, lowest, highest))
     words = {
         "peak_to_peak_uv": "peak to peak",
         "gradient_uv_per_ms": "gradient",
@@ -223,7 +218,8 @@ def judge_windows(
     spans = list(bad_spans)
     verdicts = []
     for window, figure in zip(windows, figures, strict=True):
-        reasons = [word for name, word in words.items() if not figure[name] <= used[name]]
+        limit = used[window.condition]
+        reasons = [word for name, word in words.items() if not figure[name] <= limit[name]]
         if not figure["flat_uv"] >= limits.flat_uv:
             reasons.append("flat")
         begin_s = window.start_sample / sfreq_hz
@@ -234,8 +230,19 @@ def judge_windows(
             if onset_s < end_s and onset_s + duration_s > begin_s
         ]
         verdict = LEFT_OUT if reasons else KEPT
-        verdicts.append(WindowVerdict(window, verdict, tuple(reasons), figure, dict(used)))
+        verdicts.append(WindowVerdict(window, verdict, tuple(reasons), figure, dict(limit)))
     return verdicts
+
+
+def _limits_of(figures: Sequence[Mapping[str, float]], limits: WindowLimits) -> dict[str, float]:
+    """Limits from the figures of one condition's windows, within the absolute bounds."""
+    used = {"flat_uv": limits.flat_uv}
+    for name in ("peak_to_peak_uv", "gradient_uv_per_ms", "muscle_uv"):
+        values = np.array([figure[name] for figure in figures])
+        median = np.median(values)
+        deviation = 1.4826 * np.median(np.abs(values - median))
+        used[name] = float(np.clip(median + limits.mad_factor * deviation, *getattr(limits, name)))
+    return used
 
 
 def _figures(
