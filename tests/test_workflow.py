@@ -1,0 +1,255 @@
+"""The whole job on the demo: it ends well, leaves what it says, and the numbers are right."""
+
+import hashlib
+import json
+import shutil
+import subprocess
+import sys
+from pathlib import Path
+
+import numpy as np
+import pytest
+import yaml
+from onbin import tables
+from workflow import DEMO, demo_settings, planned_jobs, snakemake, write_settings
+
+pytestmark = pytest.mark.workflow
+
+CLEAN = ("01", "02", "03", "04", "07", "08")  # sub-05's display is off, sub-06 moves too much
+OCCIPITAL = ("O1", "Oz", "O2")
+TAGS = {"left_panel": "left_h1", "right_panel": "right_h1"}
+WATCHED = {"left_panel": "watch_left", "right_panel": "watch_right"}
+
+
+def truth(label):
+    return json.loads((DEMO / f"sourcedata/truth/sub-{label}.json").read_text())
+
+
+def planted(label, tag, condition):
+    """Coefficient that was planted in the occipital region, in µV after average reference."""
+    known = truth(label)
+    response = known["response"][TAGS[tag]][condition]
+    z = np.array(response["amplitude_uv"]) * np.exp(1j * np.array(response["phase_rad"]))
+    z = z - z.mean()
+    return np.mean([z[known["channels"].index(name)] for name in OCCIPITAL])
+
+
+def region_rows(demo):
+    return {
+        (row["participant"], row["tag"], row["condition"]): row
+        for row in demo.table("responses")
+        if row["site"] == "occipital" and row["term"] == "1f"
+    }
+
+
+# --- the run ---------------------------------------------------------------------------------------
+
+
+def test_the_run_ends_well_and_says_where_the_report_is(demo):
+    assert demo.exit_code == 0, demo.output[-3000:]
+    assert "The report is results/report.html" in demo.output
+    assert "set aside: sub-06 (watch_left:" in demo.output
+    assert "Time taken:" in demo.output
+
+
+def test_a_second_run_has_nothing_to_do(demo):
+    again = snakemake(demo.folder, demo.settings)
+    assert again.returncode == 0
+    assert "Nothing to be done" in again.stdout + again.stderr
+    assert planned_jobs(demo.folder, demo.settings) == {}
+
+
+def test_results_are_a_bids_derivative(demo):
+    validator = Path(sys.executable).with_name("bids-validator-deno")
+    command = [validator if validator.exists() else "bids-validator-deno", demo.results]
+    done = subprocess.run([*command, "--format", "json"], capture_output=True, text=True)
+    issues = json.loads(done.stdout)["issues"]["issues"]
+    assert [i for i in issues if i["severity"] == "error"] == []
+    description = json.loads((demo.results / "dataset_description.json").read_text())
+    # the validator misses the absence of these two in a derivative
+    assert description["DatasetType"] == "derivative"
+    assert description["GeneratedBy"][0]["Name"] == "onbin"
+    assert description["BIDSVersion"]
+
+
+def test_the_manifest_lists_every_file_with_its_content(demo):
+    rows = tables.read_table(demo.results / "manifest.tsv")
+    for row in rows:
+        content = (demo.results / row["file"]).read_bytes()
+        assert hashlib.sha256(content).hexdigest() == row["sha256"], row["file"]
+        assert len(content) == row["bytes"]
+    listed = {row["file"] for row in rows}
+    there = {
+        path.relative_to(demo.results).as_posix()
+        for path in demo.results.rglob("*")
+        if path.is_file() and "logs" not in path.parts
+    }
+    sidecars = {path for path in there if path.endswith(".json")} - {"dataset_description.json"}
+    assert there - sidecars - {"manifest.tsv"} == listed
+
+
+def test_every_output_has_a_sidecar_that_explains_it(demo):
+    for row in tables.read_table(demo.results / "manifest.tsv"):
+        if row["step"] == "describe":
+            continue
+        path = demo.results / row["file"]
+        sidecar = json.loads(path.with_suffix(".json").read_text())
+        provenance = sidecar["Provenance"]
+        assert provenance["sha256"] == row["sha256"]
+        assert provenance["versions"]["mne"]
+        assert all(len(digest) == 64 for digest in provenance["inputs"].values())
+        if path.suffix == ".tsv":
+            assert set(tables.header(path)) == set(sidecar) - {"Provenance"}
+
+
+def test_nothing_half_made_is_left_behind(demo):
+    assert not list(demo.results.rglob(".part-*"))
+
+
+# --- a change reruns what it touches ---------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("section", "key", "value", "reruns", "spares"),
+    [
+        ("response", "neighbours", 8, {"spectra", "response", "study"}, {"components", "windows"}),
+        ("response", "level", 0.01, {"response"}, {"spectra", "alpha", "components"}),
+        ("alpha", "band_hz", [7.0, 12.0], {"alpha"}, {"spectra", "response", "filter"}),
+        ("components", "max_tag_share", 0.2, {"components", "windows"}, {"filter", "sensors"}),
+        ("study", "title", "Another title", {"report", "describe"}, {"study", "response"}),
+        ("trust", "min_windows", 12, {"study", "report"}, {"response", "alpha", "relation"}),
+    ],
+)
+def test_a_changed_setting_reruns_what_uses_it(demo, section, key, value, reruns, spares):
+    settings = yaml.safe_load(demo.settings.read_text())
+    settings[section][key] = value
+    jobs = planned_jobs(demo.folder, write_settings(demo.folder / "changed.yaml", settings))
+    assert reruns <= set(jobs)
+    assert not spares & set(jobs)
+
+
+@pytest.mark.parametrize(
+    ("module", "reruns", "spares"),
+    [
+        ("alpha", {"alpha", "relation", "study"}, {"filter", "components", "response", "spectra"}),
+        ("response", {"response"}, {"alpha", "filter", "spectra"}),
+        ("components", {"components", "windows"}, {"filter", "sensors", "intake"}),
+    ],
+)
+def test_a_changed_module_reruns_the_steps_that_use_it(demo, module, reruns, spares):
+    path = demo.folder / "scripts" / "onbin" / f"{module}.py"
+    text = path.read_text()
+    try:
+        path.write_text(f"{text}\nANOTHER = 1\n")
+        jobs = planned_jobs(demo.folder, demo.settings)
+        path.write_text(f"{text}\n# another remark\n")
+        for_a_remark = planned_jobs(demo.folder, demo.settings)
+    finally:
+        path.write_text(text)
+    assert reruns <= set(jobs)
+    assert not spares & set(jobs)
+    assert for_a_remark == {}
+
+
+# --- against the planted truth ---------------------------------------------------------------------
+
+
+def test_amplitudes_are_unbiased(demo):
+    rows = region_rows(demo)
+    bias = [
+        rows[f"sub-{label}", tag, condition]["amplitude_corrected_uv"]
+        / abs(planted(label, tag, condition))
+        - 1
+        for label in CLEAN
+        for tag in TAGS
+        for condition in WATCHED.values()
+    ]
+    assert abs(np.mean(bias)) < 0.03
+
+
+def test_amplitude_intervals_cover_the_truth(demo):
+    rows = region_rows(demo)
+    covered = []
+    for label in CLEAN:
+        for tag in TAGS:
+            for condition in WATCHED.values():
+                row = rows[f"sub-{label}", tag, condition]
+                true_uv = abs(planted(label, tag, condition))
+                covered.append(row["amplitude_low_uv"] <= true_uv <= row["amplitude_high_uv"])
+    # 24 intervals of 95 %: fewer than 20 covering has a chance of 0.3 % (binomial)
+    assert sum(covered) >= 20
+
+
+def test_phases_are_those_of_the_flicker(demo):
+    rows = region_rows(demo)
+    for label in CLEAN:
+        for tag in TAGS:
+            row = rows[f"sub-{label}", tag, WATCHED[tag]]
+            error = np.angle(np.exp(1j * (row["phase_rad"] - np.angle(planted(label, tag, WATCHED[tag])))))
+            assert abs(error) < 2 * row["phase_half_width_rad"]
+
+
+def test_every_clean_response_is_detected_and_rest_is_not(demo):
+    rows = [r for r in demo.table("responses") if r["site"] == "occipital" and r["term"] == "1f"]
+    clean = [r for r in rows if r["participant"].removeprefix("sub-") in CLEAN]
+    assert all(r["present"] for r in clean if r["driven"])
+    assert sum(r["present"] for r in clean if not r["driven"]) <= 4  # 24 tests at 5 %
+
+
+def test_individual_alpha_frequencies(demo):
+    for row in demo.table("alpha"):
+        label = row["participant"].removeprefix("sub-")
+        if label in CLEAN and row["site"] == "occipital":
+            assert row["alpha_frequency_hz"] == pytest.approx(
+                truth(label)["alpha"]["frequency_hz"], abs=0.25
+            )
+
+
+def test_the_effect_of_watching_lies_in_its_interval(demo):
+    (row,) = [r for r in demo.table("comparisons") if r["comparison"] == "watching_a_panel"]
+    effects = []
+    for who in row["who"].split():
+        label = who.removeprefix("sub-")
+        watched = [abs(planted(label, tag, WATCHED[tag])) for tag in TAGS]
+        unwatched = [
+            abs(planted(label, tag, condition))
+            for tag in TAGS
+            for condition in WATCHED.values()
+            if condition != WATCHED[tag]
+        ]
+        effects.append(np.mean(watched) - np.mean(unwatched))
+    assert row["estimate_low"] <= np.mean(effects) <= row["estimate_high"]
+    assert row["p"] < 0.05
+
+
+def test_alpha_falls_as_the_response_rises(demo):
+    (row,) = [r for r in demo.table("group_relation") if r["tag"] == "attended tag"]
+    assert row["rho_high"] < 0
+    assert row["rm_p"] < 0.001
+
+
+def test_who_is_set_aside_and_why(demo):
+    rows = {row["participant"]: row for row in demo.table("participants")}
+    assert len(rows) == 8
+    assert not rows["sub-06"]["in_study"]
+    assert "fewer than 10" in rows["sub-06"]["reason"]
+    assert rows["sub-07"]["windows_placed"] < rows["sub-01"]["windows_placed"]
+
+
+# --- the same again --------------------------------------------------------------------------------
+
+
+def test_two_runs_give_the_same_bytes(tmp_path):
+    from conftest import digests, run_study
+
+    make = DEMO / "code" / "make_demo.py"
+    small = [sys.executable, make, "--out", tmp_path / "small", "--people", "2", "--trials", "6"]
+    subprocess.run(small, check=True, capture_output=True)
+    changes = {"dataset": {"folder": "../small"}, "trust": {"min_windows": 3}}
+    found = []
+    for name in ("first", "second"):
+        done = run_study(tmp_path / name, demo_settings(**changes))
+        assert done.exit_code == 0, done.output[-3000:]
+        shutil.rmtree(done.results / "logs")
+        found.append(digests(done.results))
+    assert found[0] == found[1]
