@@ -11,6 +11,7 @@ min_version("9.10")
 
 
 include: "rules/common.smk"
+include: "rules/audit.smk"
 include: "rules/intake.smk"
 include: "rules/cleaning.smk"
 include: "rules/measures.smk"

@@ -17,6 +17,7 @@ rule intake:
     params:
         settings=lambda wildcards: settings_part(
             "intake",
+            "flicker.photodiode",
             "conditions.*.events",
             "conditions.*.duration_s",
             folder=STUDY.dataset.folder,

@@ -1,10 +1,43 @@
 # From a participant's windows to spectra, responses, alpha and how the two relate.
 
 
+rule flicker:
+    input:
+        signal=result("windows_signal"),
+        verdicts=result("windows_verdicts"),
+    output:
+        **made("flicker", "frequencies"),
+    log:
+        log_of("flicker", "{recording}"),
+    benchmark:
+        benchmark_of("flicker", "{recording}")
+    threads: 1
+    resources:
+        mem_mb=1000,
+        runtime=20,
+    params:
+        settings=lambda wildcards: settings_part(
+            "flicker",
+            "windows.length_s",
+            "filter.line_hz",
+            "terms",
+            "conditions.*.flickering",
+            "regions",
+            "relation.response_region",
+            recording=wildcards.recording,
+        ),
+        code=code("flicker"),
+    message:
+        "flicker: looking for the tags of {wildcards.recording}"
+    script:
+        "../scripts/flicker.py"
+
+
 rule spectra:
     input:
         signals=of_participant("windows_signal"),
         verdicts=of_participant("windows_verdicts"),
+        flicker=of_participant("flicker_frequencies"),
     output:
         **made("spectra", "coefficients", "psd"),
     log:
@@ -17,7 +50,6 @@ rule spectra:
         runtime=30,
     params:
         settings=lambda wildcards: settings_part(
-            "windows.length_s",
             "filter.lowpass_hz",
             "terms",
             "conditions.*.flickering",
@@ -121,3 +153,35 @@ rule relation:
         "relation: alpha and response of {wildcards.participant}"
     script:
         "../scripts/relation.py"
+
+
+rule attention:
+    input:
+        signals=of_participant("windows_signal"),
+        verdicts=of_participant("windows_verdicts"),
+        flicker=of_participant("flicker_frequencies"),
+    output:
+        **made("attention", "measures"),
+    log:
+        log_of("attention", "{participant}"),
+    benchmark:
+        benchmark_of("attention", "{participant}")
+    threads: 1
+    resources:
+        mem_mb=2000,
+        runtime=30,
+    params:
+        settings=lambda wildcards: settings_part(
+            "filter.lowpass_hz",
+            "terms",
+            "conditions.*.flickering",
+            "conditions.*.attended",
+            "seed",
+            participant=wildcards.participant,
+            recordings=recordings_of(wildcards.participant),
+        ),
+        code=code("attention"),
+    message:
+        "attention: telling which tag {wildcards.participant} attended"
+    script:
+        "../scripts/attention.py"

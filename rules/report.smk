@@ -3,10 +3,14 @@
 
 rule report:
     input:
+        plan=result("plan_terms"),
+        plan_page=result("plan_page"),
         participants=result("study_participants"),
+        flicker=result("study_flicker"),
         responses=result("study_responses"),
         alpha=result("study_alpha"),
         relation=result("study_relation"),
+        attention=result("study_attention"),
         comparisons=result("study_comparisons"),
         group=result("study_group"),
         relation_windows=of_all_participants("relation_windows"),

@@ -8,7 +8,7 @@ def intake(inputs, outputs, settings):
     """Bring a recording to its working rate."""
     recording = settings["recording"]
     raw = dataset.read_recording(settings["folder"], recording, settings["extension"])
-    channels = dataset.choose_channels(raw)
+    channels = dataset.choose_channels(raw, settings["flicker"]["photodiode"])
     rate = tagging.exact_rate(raw.info["sfreq"])
     factor = max(1, int(rate / tagging.exact(settings["intake"]["working_rate_hz"])))
 

@@ -1,11 +1,11 @@
 """Amplitude, SNR, phase and detection of each term in each condition at each site."""
 
-from onbin import arrays, response_tables, tables, tagging
+from onbin import arrays, response_tables, tables
 from onbin.runner import run
 
 MEASURES = [
-    "participant", "condition", "tag", "term", "frequency_hz", "driven", "site", "site_kind",
-    "channels", "windows", "amplitude_uv", "amplitude_low_uv", "amplitude_high_uv", "noise_uv2",
+    "participant", "condition", "tag", "term", "frequency_hz", "frequency_source", "driven", "site",
+    "site_kind", "channels", "windows", "amplitude_uv", "amplitude_low_uv", "amplitude_high_uv", "noise_uv2",
     "neighbours", "amplitude_corrected_uv", "amplitude_baseline_uv", "projected_amplitude_uv",
     "window_amplitude_uv", "total_power_uv2", "total_noise_uv2", "snr", "snr_db", "snr_p",
     "amplitude_ratio", "t2circ", "t2circ_p", "hotelling_t2", "hotelling_p", "condition_index",
@@ -23,13 +23,12 @@ def measure_response(inputs, outputs, settings):
     """Measure a participant's responses."""
     stored = arrays.read(inputs.coefficients)
     coefficients = response_tables.Coefficients.of(stored, settings["terms"])
-    tags = tagging.study_tags(settings["terms"])
     conditions, chosen = settings["conditions"], settings["response"]
     order = settings["terms"]["intermodulation_order"]
     line_hz = settings["filter"]["line_hz"] or float(stored["line_hz"])
     occupied_in = {
         name: response_tables.occupied(
-            tags, about["flickering"], order, float(stored["passband_hz"]), line_hz
+            coefficients.tags, about["flickering"], order, float(stored["passband_hz"]), line_hz
         )
         for name, about in conditions.items()
     }

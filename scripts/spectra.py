@@ -1,7 +1,7 @@
 """Coefficients at every term and its neighbouring bins, and power spectra, window by window."""
 
 import numpy as np
-from onbin import arrays, dataset, sites, spectra, tables, tagging
+from onbin import arrays, dataset, flicker_tables, sites, spectra, tables, tagging
 from onbin.errors import DataError
 from onbin.runner import run
 
@@ -14,20 +14,35 @@ def measure_spectra(inputs, outputs, settings):
     names = [dataset.eeg_names(raw) for raw in raws]
     rate = dataset.common_rate(raws, settings["recordings"])
     places = sites.common_sites(names, settings["regions"])
-    tags = tagging.study_tags(settings["terms"])
+    kept_of = [
+        [row for row in tables.read_table(path) if row["verdict"] == "kept"]
+        for path in inputs.verdicts
+    ]
+    shortest = min((row["n_samples"] for kept in kept_of for row in kept), default=None)
+    if shortest is None:
+        raise DataError("no window was kept; the tables of windows tell the reasons.")
+
+    used = flicker_tables.Used.of(
+        [tables.read_table(path) for path in inputs.flicker],
+        tagging.study_tags(settings["terms"]),
+    )
     passband_hz = tagging.passband_end(settings["filter"]["lowpass_hz"], float(rate))
     terms = tagging.study_terms(settings["terms"], passband_hz)
-    length_s = settings["windows"]["length_s"]
-    samples = list(tagging.window_samples(tags, terms, rate, length_s).values())
+    length_s = shortest / rate
+    samples = list(
+        tagging.window_samples(
+            used.tags, tagging.retuned(terms, used.tags), rate, length_s
+        ).values()
+    )
     line_hz = raws[0].info["line_freq"] or 0.0  # 0 where the dataset does not tell
     response = settings["response"]
     bins = [0, *tagging.neighbour_offsets(response["neighbours"], response["skip"])]
 
     windows, coefficients, densities, subtracted = [], [], [], []
-    for raw, channels, path, recording in zip(
-        raws, names, inputs.verdicts, settings["recordings"], strict=True
+    for raw, channels, kept, tags, recording in zip(
+        raws, names, kept_of, used.of_recordings, settings["recordings"], strict=True
     ):
-        kept = [row for row in tables.read_table(path) if row["verdict"] == "kept"]
+        here = tagging.retuned(terms, tags)
         windows += [row | {"recording": recording} for row in kept]
         sites_uv = sites.averaging(places, channels) @ dataset.eeg_uv(raw)
         n_channels = sum(site.kind == "channel" for site in places)
@@ -37,7 +52,7 @@ def measure_spectra(inputs, outputs, settings):
                 np.array([row["start_sample"] for row in kept], dtype=int),
                 np.array([row["offset_s"] for row in kept], dtype=float),
                 float(rate),
-                np.array([float(term.frequency) for term in terms]),
+                np.array([float(term.frequency) for term in here]),
                 np.array(samples, dtype=int),
                 np.array(bins),
             )
@@ -47,7 +62,7 @@ def measure_spectra(inputs, outputs, settings):
             stretch = slice(row["start_sample"], row["start_sample"] + row["n_samples"])
             window_uv = sites_uv[:n_channels, stretch]
             remaining_uv, removed_uv2 = spectra.remove_sinusoids(
-                window_uv, float(rate), _alpha_terms_hz(terms, driven)
+                window_uv, float(rate), _alpha_terms_hz(here, driven)
             )
             alpha = settings["alpha"]
             frequencies_hz, psd = spectra.power_spectral_density(
@@ -55,8 +70,6 @@ def measure_spectra(inputs, outputs, settings):
             )
             densities.append(psd)
             subtracted.append(removed_uv2.sum(axis=-1))
-    if not windows:
-        raise DataError("no window was kept; the tables of windows tell the reasons.")
 
     of_windows = arrays.from_rows(
         windows, ["recording", "condition", "trial", "window", "offset_s"]
@@ -67,6 +80,8 @@ def measure_spectra(inputs, outputs, settings):
         bins=bins,
         samples=samples,
         rate=str(rate),
+        used=[str(frequency) for frequency in used.tags.values()],
+        measured=used.measured,
         passband_hz=passband_hz,
         line_hz=line_hz,
         site=[site.name for site in places],

@@ -39,17 +39,31 @@ def make_study(inputs, outputs, settings):
         )
         for participant, recordings in settings["participants"].items()
     ]
+    flicker = [
+        {"recording": recording, **row}
+        for recording, path in zip(settings["recordings"], inputs.flicker, strict=True)
+        for row in tables.read_table(path)
+    ]
     in_study = [row["participant"] for row in participants if row["in_study"]]
-    responses, alphas, relations, windows = (
+    responses, alphas, relations, attentions, windows = (
         [row for path in paths for row in tables.read_table(path)]
-        for paths in (inputs.responses, inputs.alphas, inputs.relations, inputs.relation_windows)
+        for paths in (
+            inputs.responses,
+            inputs.alphas,
+            inputs.relations,
+            inputs.attentions,
+            inputs.relation_windows,
+        )
     )
 
     tables.write_table(outputs.participants, participants, PARTICIPANTS)
+    columns = ["recording", *tables.header(inputs.flicker[0])]
+    tables.write_table(outputs.flicker, flicker, columns)
     for path, rows, first in (
         (outputs.responses, responses, inputs.responses[0]),
         (outputs.alpha, alphas, inputs.alphas[0]),
         (outputs.relation, relations, inputs.relations[0]),
+        (outputs.attention, attentions, inputs.attentions[0]),
     ):
         marked = (row | {"in_study": row["participant"] in in_study} for row in rows)
         participant, *others = tables.header(first)

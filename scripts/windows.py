@@ -16,11 +16,11 @@ def clean_and_cut(inputs, outputs, settings):
     raw = dataset.read_signal(inputs.signal)
     rate = tagging.exact_rate(raw.info["sfreq"])
     separated = components.Separation(**arrays.read(inputs.ica))
-    removed = [
-        row["component"]
+    removed = {
+        row["component"]: row["component_class"]
         for row in tables.read_table(inputs.components)
         if row["verdict"] == components.REMOVED
-    ]
+    }
     before_uv = dataset.eeg_uv(raw)
     clean_uv, gates = components.remove_components(before_uv, separated, removed, float(rate))
     clean = dataset.with_eeg(raw, clean_uv)

@@ -59,7 +59,7 @@ def test_same_figure_has_the_same_bytes(tmp_path):
 
 @pytest.mark.parametrize("people", [1, 3, 60])
 def test_quality_has_a_row_for_everybody(people, tmp_path):
-    figure = figures.quality(quality(people), CONDITIONS, max_bad_share=0.25, min_windows=4)
+    figure = figures.quality(quality(people), {"watch_left": 4, "rest": 3}, max_bad_share=0.25)
     shown = texts(figure)
     assert {f"sub-{n}" for n in range(people) if n != 1} <= set(shown)
     assert "20/20" in shown

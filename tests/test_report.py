@@ -5,6 +5,8 @@ from html.parser import HTMLParser
 from itertools import pairwise
 from types import SimpleNamespace
 
+import attention as attention_step
+import flicker as flicker_step
 import mne
 import numpy as np
 import pytest
@@ -93,7 +95,8 @@ class Study:
         self.names = [f"sub-{number:02}" for number in range(1, people + 1)]
         self.inputs = SimpleNamespace(
             coefficients=[], psd=[], relation_windows=[], responses=[], alphas=[], relations=[],
-            people=[], channels=[], gains=[], sensors=[], components=[], windows=[], cleaning=[],
+            people=[], flicker=[], channels=[], gains=[], sensors=[], components=[], windows=[],
+            cleaning=[], attentions=[],
         )  # fmt: skip
         for number, who in enumerate(self.names):
             present = [name for name in settings.conditions if (lacking or {}).get(number) != name]
@@ -180,6 +183,28 @@ class Study:
             }
             for term in terms
         ]
+        offset = who == "sub-02"
+        found = [
+            {
+                "tag": tag, "signal": "occipital", "set_hz": float(frequency),
+                "flicker_verdict": "offset" if offset else "as set",
+                "found_hz": float(frequency) + 0.2 * offset,
+                "found_low_hz": float(frequency) + 0.2 * offset - 0.001,
+                "found_high_hz": float(frequency) + 0.2 * offset + 0.001,
+                "offset_bins": 0.5 * offset, "lost_db": -3.92 * offset,
+                "drift_low_hz_per_min": -0.01, "drift_high_hz_per_min": 0.01,
+                "phase_steps": 0, "phase_steps_at": None, "frequency_source": "as set",
+            }
+            for tag, frequency in tagging.study_tags(self.whole["terms"]).items()
+        ]  # fmt: skip
+        self._write("flicker", who, found, flicker_step.COLUMNS)
+        told = {
+            "participant": who, "attended_tags": "left, right", "decision": "window",
+            "decision_s": 2.5, "chance": 0.5, "accuracy": 0.75, "accuracy_p": 0.01,
+        }  # fmt: skip
+        if offset:
+            told = {"participant": who, "attended_tags": "left, right", "reason": "too few trials"}
+        self._write("attentions", who, [told] if found else [], attention_step.MEASURES)
         columns = ["tag", "term", "frequency_hz", "gain"]
         self._write("gains", who, gains, columns)
         self._write("cleaning", who, gains, [*columns, "topography_correlation"])
@@ -212,7 +237,8 @@ class Study:
         arrays.write(
             coefficients, coefficients_uv=values_uv.astype(np.complex64), bins=bins,
             samples=np.array(list(samples.values()), dtype=int), rate="250", passband_hz=100.0,
-            line_hz=50.0, site=sites, site_kind=["channel"] * len(self.channels) + ["region"],
+            line_hz=50.0, used=[str(f) for f in tags.values()], measured=np.array([], dtype=str),
+            site=sites, site_kind=["channel"] * len(self.channels) + ["region"],
             site_channels=[*self.channels, " ".join(regions["occipital"])], **marks,
         )  # fmt: skip
         frequencies_hz = np.arange(0, 60, 0.5)
@@ -271,13 +297,23 @@ class Study:
         self.inputs.relation_windows.append(paths["lw"])
 
     def _study(self):
-        made = ("participants", "responses", "alpha", "relation", "comparisons", "group")
+        made = (
+            "participants",
+            "flicker",
+            "responses",
+            "alpha",
+            "relation",
+            "attention",
+            "comparisons",
+            "group",
+        )
         outputs = SimpleNamespace(**{name: self.folder / f"{name}.tsv" for name in made})
         recordings = {who: [f"{who}/eeg/{who}_task-x"] for who in self.names}
         study_step.make_study(
             self.inputs,
             outputs,
             self.whole
+            | part(self.settings, "planned")
             | {"participants": recordings, "recordings": [r for (r,) in recordings.values()]},
         )
         vars(self.inputs).update(vars(outputs))
@@ -306,6 +342,7 @@ class Page(HTMLParser):
 
     def handle_endtag(self, tag):
         assert self.open.pop() == tag
+        self.text += " " * (tag in ("td", "th"))
 
     def handle_data(self, data):
         if self.open and self.open[-1] != "style":
@@ -431,6 +468,19 @@ def test_flicker_table_is_exact(usual):
     assert "72/5 = 14.4" in Page(usual[1]).words
 
 
+def test_flicker_elsewhere_than_set_is_told_at_the_top(usual):
+    words = Page(usual[1]).words
+    assert words.index("In 2 cases the flicker is not") < words.index("Who is in the study")
+    assert "as set 10, offset 2" in words
+    # half a bin off: 20·log10(sin(π/2)/(π/2)) = -3.92 dB
+    assert "sub-02_task-x left occipital offset 14.4 14.6000 14.5990 to 14.6010 0.500 −3.9" in words
+
+
+def test_attended_tag_is_told_over_those_who_have_a_figure(usual):
+    words = Page(usual[1]).words
+    assert "window 2.50 4 75.0 75.0 to 75.0 50.0 4 of 4 sub-02 (too few trials)" in words
+
+
 def test_settings_on_the_page_make_the_same_study(usual, tmp_path):
     made, text = usual
     listing = next(part for part in re.findall(r"<pre>(.*?)</pre>", text, re.S) if "study:" in part)
@@ -439,6 +489,7 @@ def test_settings_on_the_page_make_the_same_study(usual, tmp_path):
     again = load_settings(path)
     assert again == made.settings
     assert list(again.tags) == ["right", "left"]  # f1 and f2 are counted in this order
+    assert list(again.comparisons) == ["watching", "eyes"]
 
 
 def test_same_in_same_out(usual):

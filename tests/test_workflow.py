@@ -42,7 +42,7 @@ def region_rows(demo):
     }
 
 
-# --- the run ---------------------------------------------------------------------------------------
+# --- the run ---
 
 
 def test_the_run_ends_well_and_says_where_the_report_is(demo):
@@ -106,7 +106,7 @@ def test_nothing_half_made_is_left_behind(demo):
     assert not list(demo.results.rglob(".part-*"))
 
 
-# --- a change reruns what it touches ---------------------------------------------------------------
+# --- a change reruns what it touches ---
 
 
 @pytest.mark.parametrize(
@@ -151,7 +151,7 @@ def test_a_changed_module_reruns_the_steps_that_use_it(demo, module, reruns, spa
     assert for_a_remark == {}
 
 
-# --- against the planted truth ---------------------------------------------------------------------
+# --- against the planted truth ---
 
 
 def test_amplitudes_are_unbiased(demo):
@@ -185,7 +185,9 @@ def test_phases_are_those_of_the_flicker(demo):
     for label in CLEAN:
         for tag in TAGS:
             row = rows[f"sub-{label}", tag, WATCHED[tag]]
-            error = np.angle(np.exp(1j * (row["phase_rad"] - np.angle(planted(label, tag, WATCHED[tag])))))
+            error = np.angle(
+                np.exp(1j * (row["phase_rad"] - np.angle(planted(label, tag, WATCHED[tag]))))
+            )
             assert abs(error) < 2 * row["phase_half_width_rad"]
 
 
@@ -236,7 +238,7 @@ def test_who_is_set_aside_and_why(demo):
     assert rows["sub-07"]["windows_placed"] < rows["sub-01"]["windows_placed"]
 
 
-# --- the same again --------------------------------------------------------------------------------
+# --- the same again ---
 
 
 def test_two_runs_give_the_same_bytes(tmp_path):

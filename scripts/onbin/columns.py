@@ -41,6 +41,8 @@ MEIGEN_BACH = "Meigen & Bach 2000, Doc Ophthalmol 98:207"
 CORCORAN = "Corcoran et al. 2018, Psychophysiology 55:e13064"
 DONOGHUE = "Donoghue et al. 2020, Nat Neurosci 23:1655"
 BAKDASH = "Bakdash & Marusich 2017, Front Psychol 8:456"
+LIN = "Lin et al. 2006, IEEE Trans Biomed Eng 53:2610 (from memory)"
+WOLPAW = "Wolpaw et al. 2000, IEEE Trans Rehabil Eng 8:164 (from memory)"
 
 COLUMNS = {
     # who, what and where
@@ -121,9 +123,66 @@ COLUMNS = {
     "topography_correlation": Column(
         "Correlation of the term's topography before and after the cleaning."
     ),
+    # plan
+    "working_rate_hz": Column("Sampling rate after intake.", "Hz"),
+    "term_kind": _text(
+        "harmonic; intermodulation; mains, a multiple of its frequency; alias, where a frequency "
+        "above half the recording's sampling rate folds back to, or an image of a sampled sine."
+    ),
+    "frequency_exact": _text("Frequency in Hz as a ratio of whole numbers."),
+    "frames_per_cycle": _count("Frames of the display in one cycle, where they are whole."),
+    "planned_driven": Column("Whether its tags flicker together in any condition.", kind="boolean"),
+    "measured": Column("Whether the study measures the term.", kind="boolean"),
+    "window_s": Column("Length of the window in which the term is measured.", "s"),
+    "cycles": Column("Cycles of the term in that window; a whole number lies on a bin."),
+    "planned_neighbours": _count(
+        "Neighbouring bins that can be used, the fewest over the conditions that drive the term."
+    ),
+    "neighbours_left_out": _text(
+        "The other neighbouring bins, as bins from the term, after what lies there."
+    ),
+    "collides_with": _text("Terms closer than one bin of the window in which either is measured."),
+    "crowds": _text("Measured terms among whose neighbouring bins the term falls."),
+    "in_alpha": Column("Whether it lies where alpha is looked for or measured.", kind="boolean"),
+    "half_in_alpha": Column("Whether half the frequency of the tag does.", kind="boolean"),
+    "planned_gain": Column(
+        "Gain at the term through decimation and filters: 1 leaves it as it is."
+    ),
+    # flicker
+    "signal": _text("What the frequency was found in: a region, or the photodiode."),
+    "set_hz": Column("Frequency that the settings give.", "Hz"),
+    "flicker_verdict": _text(
+        "as set; offset: the 99 % interval leaves out the frequency set; cannot tell: the power "
+        "near it could well be noise."
+    ),
+    "found_hz": Column(
+        "Frequency of the largest power near the one set: maximum likelihood for a sinusoid of "
+        "unknown amplitude and phase in each stretch.",
+        "Hz",
+        source="Kay 1993 (from memory)",
+    ),
+    "found_low_hz": Column("Lower end of its 99 % interval, by the Cramér-Rao bound.", "Hz"),
+    "found_high_hz": Column("Upper end of that interval.", "Hz"),
+    "offset_hz": Column("found_hz less set_hz.", "Hz"),
+    "offset_bins": Column("The offset in bins of the window."),
+    "lost_db": Column(
+        "What a coefficient at the frequency set loses in one window: 20·log10|sin(πd)/(πd)|, d "
+        "the offset in bins.",
+        "dB",
+    ),
+    "stretch_snr_db": Column("Power of the response over noise in a bin of one stretch.", "dB"),
+    "presence_p": Column("Chance of so much power near the tag without a response."),
+    "drift_hz_per_min": Column("Change of the frequency over the recording.", "Hz/min"),
+    "drift_low_hz_per_min": Column("Lower end of its 99 % interval.", "Hz/min"),
+    "drift_high_hz_per_min": Column("Upper end of that interval.", "Hz/min"),
+    "phase_steps": _count("Sudden steps of the phase within stretches, as lost frames make them."),
+    "phase_steps_at": _text("Where they are: time in the recording in s, and size in degrees."),
+    "used_hz": Column("Frequency that the measures rest on.", "Hz"),
+    "frequency_source": _text("as set, or measured: the frequency found was adopted."),
     # response
     "harmonics": _text(
-        "Harmonics that the sum holds; those shared with another term are left out."
+        "Harmonics that the sum or the references hold; those shared with another term are left "
+        "out."
     ),
     "neighbours": _count("Neighbouring bins B that the noise rests on."),
     "amplitude_uv": Column(
@@ -237,6 +296,37 @@ COLUMNS = {
     "rho_high": Column("Upper end of that interval."),
     "rm_r": Column("Repeated-measures correlation over all windows.", source=BAKDASH),
     "rm_p": Column("p of the repeated-measures correlation.", source=BAKDASH),
+    # attention
+    "attended_tags": _text("Attended tags that are told apart."),
+    "conditions": _text("Conditions in which they are attended, with the same tags flickering."),
+    "decision": _text("What one decision rests on: a window, or all windows of a trial."),
+    "decision_s": Column("Length of signal that one decision rests on, on average.", "s"),
+    "trials": _count("Trials that the figure rests on."),
+    "accuracy": Column(
+        "Share of right decisions, the mean over the attended tags. A linear discriminant of the "
+        "canonical correlations with each tag's sine-cosine references, cross-validated by trial: "
+        "filters and discriminant never see a trial that they decide on.",
+        null="mean chance",
+        source=LIN,
+    ),
+    "accuracy_low": Column(
+        "Lower end of its 95 % interval. Trials count as the independent observations, for "
+        "windows too, since windows of a trial are alike.",
+        source="Wilson 1927, J Am Stat Assoc 22:209",
+    ),
+    "accuracy_high": Column("Upper end of that interval."),
+    "chance": Column("Accuracy by guessing: one over the number of attended tags."),
+    "accuracy_p": Column(
+        "One-sided p of the accuracy, by permuting trials within the parts of the "
+        "cross-validation.",
+        null="uniform",
+    ),
+    "itr_bits_per_min": Column(
+        "Information transfer rate at that length of signal, time between not counted; 0 where "
+        "the accuracy is not above chance.",
+        "bit/min",
+        source=WOLPAW,
+    ),
     # study
     "measure": _text("Column that is compared."),
     "comparison": _text("Comparison, as named in the settings."),

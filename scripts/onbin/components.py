@@ -2,7 +2,7 @@
 
 import warnings
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -26,6 +26,7 @@ SAMPLES_PER_WEIGHT = 20
 # Variance, over the largest, below which a direction is but rounding (an earlier reference).
 SMALLEST_EIGENVALUE = 1e-8
 LABEL_SECONDS = 600.0
+PASSING = ("eye",)  # classes whose artifacts come and go
 # Where a passing artifact is: beyond so many robust sd and so long to each side, with soft edges;
 # it is passing if so much of its power lies there.
 ACTIVE_SD, ACTIVE_MARGIN_S, RAMP_S, PASSING_SHARE = 4.0, 0.25, 0.1, 0.5
@@ -57,10 +58,10 @@ class ComponentLimits:
         these classes are removed.
     """
 
-    remove: Mapping[str, float] = field(
-        default_factory=lambda: {"eye": 0.7, "muscle": 0.8, "heart": 0.8, "channel noise": 0.9}
-    )
-    max_tag_share: float = 0.1
+    # Blinks and gaze are labelled above 0.9; below it, in short recordings with few channels,
+    # components go that take up to a fifth of a response's SNR with them.
+    remove: Mapping[str, float]
+    max_tag_share: float
     correlation: float = 0.7
 
 
@@ -218,7 +219,7 @@ class Separation:
         return np.eye(len(self.maps)) - self.maps[:, removed] @ taken
 
 
-def activity(sources: np.ndarray, rate_hz: float) -> np.ndarray:
+def activity(sources: np.ndarray, rate_hz: float, passing: Sequence[bool]) -> np.ndarray:
     """Where each artifact is: 0 where its source is quiet, 1 where it is active, smooth between.
 
     A blink lasts a third of a second. Taking its component out of the seconds between as well
@@ -226,12 +227,14 @@ def activity(sources: np.ndarray, rate_hz: float) -> np.ndarray:
     is taken out only where it is active (the thought of Castellanos & Makarov 2006, J Neurosci
     Methods 158:300, from memory, who kept the small wavelet coefficients of artifact components).
     Active is beyond 4 robust standard deviations, and 0.25 s to each side. A component whose power
-    is not mostly there is no passing artifact: it is taken out everywhere.
+    is not mostly there is taken out everywhere, unless its artifact is passing by its nature.
 
     Parameters
     ----------
     sources : ndarray, shape (n_components, n_times)
     rate_hz : float
+    passing : sequence of bool
+        Whether the artifact is passing by its nature, as blinks are and muscle may not be.
 
     Returns
     -------
@@ -242,17 +245,17 @@ def activity(sources: np.ndarray, rate_hz: float) -> np.ndarray:
     gates = np.ones(sources.shape)
     margin = 2 * round(ACTIVE_MARGIN_S * rate_hz) + 1
     ramp = 2 * round(RAMP_S / 2 * rate_hz) + 1
-    for gate, source in zip(gates, sources, strict=True):
+    for gate, source, always in zip(gates, sources, passing, strict=True):
         deviation = np.abs(source - np.median(source))
         active = deviation > ACTIVE_SD * 1.4826 * np.median(deviation)
         near = maximum_filter1d(active, margin)
-        if np.sum(source[near] ** 2) > PASSING_SHARE * np.sum(source**2):
+        if always or np.sum(source[near] ** 2) > PASSING_SHARE * np.sum(source**2):
             gate[:] = uniform_filter1d(maximum_filter1d(near, ramp).astype(float), ramp)
     return gates
 
 
 def remove_components(
-    data_uv: np.ndarray, separation: Separation, removed: Sequence[int], rate_hz: float
+    data_uv: np.ndarray, separation: Separation, removed: Mapping[int, str], rate_hz: float
 ) -> tuple[np.ndarray, np.ndarray]:
     """Take components out of the channels where they are active.
 
@@ -261,7 +264,8 @@ def remove_components(
     data_uv : ndarray, shape (n_channels, n_times)
         The channels of the separation.
     separation : Separation
-    removed : sequence of int
+    removed : mapping of int to str
+        Components and their classes.
     rate_hz : float
 
     Returns
@@ -270,10 +274,10 @@ def remove_components(
     gates : ndarray, shape (n_removed, n_times)
         From `activity`.
     """
-    removed = list(removed)
-    sources = separation.unmixing[removed] @ data_uv
-    gates = activity(sources, rate_hz)
-    return data_uv - separation.maps[:, removed] @ (gates * sources), gates
+    chosen = list(removed)
+    sources = separation.unmixing[chosen] @ data_uv
+    gates = activity(sources, rate_hz, [label in PASSING for label in removed.values()])
+    return data_uv - separation.maps[:, chosen] @ (gates * sources), gates
 
 
 def label_components(raw, ica) -> tuple[np.ndarray, tuple[str, ...]]:

@@ -65,8 +65,8 @@ def read_recording(folder: str | Path, name: str, extension: str):
         ) from error
 
 
-def choose_channels(raw) -> list[dict[str, Any]]:
-    """Keep EEG channels and those that record eyes and heart; see that EEG has positions.
+def choose_channels(raw, photodiode: str | None = None) -> list[dict[str, Any]]:
+    """Keep EEG, what records eyes, heart and the light; see that EEG has positions.
 
     Changes ``raw``. Where the dataset gives no positions they are those of the template by the
     10-05 names.
@@ -84,7 +84,8 @@ def choose_channels(raw) -> list[dict[str, Any]]:
             f"no channel is EEG; the types are {', '.join(sorted(set(kinds.values())))}. Set type "
             "EEG in channels.tsv."
         )
-    raw.pick([name for name, kind in kinds.items() if kind in ("eeg", *AUXILIARY_TYPES)])
+    wanted = ("eeg", *AUXILIARY_TYPES)
+    raw.pick([name for name, kind in kinds.items() if kind in wanted or name == photodiode])
     eeg = [name for name in raw.ch_names if kinds[name] == "eeg"]
     given = _positions(raw)
     source = "dataset"
@@ -260,6 +261,16 @@ def positions_m(raw) -> np.ndarray:
 def bad_spans(raw) -> list[tuple[float, float, str]]:
     """Stretches that the dataset marks as bad: onset and duration in s, and description."""
     return [(a["onset"], a["duration"], a["description"]) for a in raw.annotations]
+
+
+def channel_uv(raw, name: str) -> np.ndarray:
+    """One channel in µV (a photodiode's in millionths of its own unit), shape (n_times,)."""
+    if name not in raw.ch_names:
+        raise DataError(
+            f"flicker.photodiode: the recording has no channel {name!r}; it has "
+            f"{', '.join(raw.ch_names)}."
+        )
+    return raw.get_data(picks=[name])[0] * 1e6
 
 
 def eeg_names(raw) -> list[str]:

@@ -118,16 +118,19 @@ def _figure(width_in: float, height_in: float) -> Any:
 def note(text: str) -> Any:
     """A figure that says why there is nothing to draw."""
     figure = _figure(WIDTH_IN, 1.0)
-    figure.text(0.5, 0.5, text, ha="center", va="center", wrap=True)
+    figure.text(0.5, 0.5, text, ha="center", va="center")
     return figure
 
 
 @_styled
-def quality(
-    people: Sequence[Quality], conditions: Sequence[str], max_bad_share: float, min_windows: int
-) -> Any:
-    """Windows kept, bad channels and components removed, person by person."""
+def quality(people: Sequence[Quality], min_windows: Mapping[str, int], max_bad_share: float) -> Any:
+    """Windows kept, bad channels and components removed, person by person.
+
+    `min_windows` is by condition, and the conditions are shown in its order.
+    """
     import seaborn
+
+    conditions = list(min_windows)
 
     height_in = 1.7 + 0.24 * len(people)
     figure = _figure(max(WIDTH_IN, 5.4 + 0.9 * len(conditions)), height_in)
@@ -136,7 +139,6 @@ def quality(
     )
     rows = np.arange(len(people)) + 0.5
     labels = [p.participant if p.in_study else f"{p.participant} (set aside)" for p in people]
-
     shares = np.full((len(people), len(conditions)), np.nan)
     texts = np.full(shares.shape, "", dtype=object)
     for row, person in enumerate(people):
@@ -144,15 +146,16 @@ def quality(
             kept, placed = person.windows.get(condition, (0, 0))
             if placed:
                 shares[row, column] = 100 * kept / placed
-                texts[row, column] = f"{kept}/{placed}" + (" !" if kept < min_windows else "")
+                texts[row, column] = f"{kept}/{placed}" + (
+                    " !" if kept < min_windows[condition] else ""
+                )
     seaborn.heatmap(
         shares, ax=kept_axes, annot=texts, fmt="", cmap=HEAT, vmin=0, vmax=130, linewidths=0.6,
         cbar=False, annot_kws={"size": 7.5}, xticklabels=[_two_lines(c) for c in conditions],
         yticklabels=labels,
     )  # fmt: skip
-    centred = {"ha": "center", "va": "center", "size": 7.5, "color": MUTED}
     for row, column in np.argwhere(np.isnan(shares)):
-        kept_axes.text(column + 0.5, row + 0.5, "none", **centred)
+        kept_axes.text(column + 0.3, row + 0.65, "none", size=7.5, color=MUTED)
     kept_axes.tick_params(length=0, rotation=0)
     kept_axes.set_title("Windows kept / placed\n(darker: larger share)")
 
@@ -200,8 +203,8 @@ def bins(neighbourhoods: Sequence[Neighbourhood]) -> Any:
         colour = ROLES[hood.role][0]
         tag_hz, beside_hz = hood.frequencies_hz[0], hood.frequencies_hz[1:]
         used, beside_uv = hood.used[1:], mean_uv[1:]
-        people_uv = hood.amplitude_uv[:, 0]
-        axes.plot(np.full(len(people_uv), tag_hz), people_uv, "_", color=MUTED, alpha=0.6)
+        for person_uv in hood.amplitude_uv:
+            axes.plot(tag_hz, person_uv[0], "_", color=MUTED, alpha=0.6)
         axes.vlines(beside_hz[used], 0, beside_uv[used], color=MUTED, linewidth=2)
         axes.plot(beside_hz[~used], beside_uv[~used], "x", color=MUTED, markersize=4)
         axes.vlines(tag_hz, 0, mean_uv[0], color=colour, linewidth=3)
@@ -210,7 +213,6 @@ def bins(neighbourhoods: Sequence[Neighbourhood]) -> Any:
         axes.set_title(f"{words(hood.condition)}\n{hood.role}{kind}")
         if column == 0:
             axes.set_ylabel(f"{words(hood.tag)}, {tag_hz:.4g} Hz\namplitude (µV)")
-        axes.tick_params(labelleft=column == 0)
     for axes in grid[:, 0]:  # shared along the row
         axes.set_ylim(bottom=0)
     figure.supxlabel("frequency (Hz)", size=9)
@@ -277,15 +279,13 @@ def responses(rows: Sequence[Mapping[str, Any]]) -> Any:
     people = sorted({row["participant"] for row in rows})
     figure = _figure(max(WIDTH_IN, 1.8 * len(conditions)), 0.9 + 2.4 * len(tags))
     grid = figure.subplots(len(tags), 1, sharex=True, squeeze=False)[:, 0]
-    spread = np.linspace(-0.36, 0.36, len(people)) if len(people) > 1 else np.zeros(1)
+    spread = np.linspace(-0.36, 0.36, len(people) + 2)[1:-1]  # one alone is in the middle
     size = 5 if len(people) <= 20 else 3
     for tag, axes in zip(tags, grid, strict=True):
         for index, condition in enumerate(conditions):
             cell = [r for r in rows if r["tag"] == tag and r["condition"] == condition]
-            if not cell:
-                continue
-            colour, marker = ROLES[cell[0]["role"]]
             for row in cell:
+                colour, marker = ROLES[row["role"]]
                 x = index + spread[people.index(row["participant"])]
                 bounds = [row["amplitude_low_uv"], row["amplitude_high_uv"]]
                 style = _person(colour, row["in_study"])

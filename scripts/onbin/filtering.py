@@ -412,8 +412,8 @@ class FilterChain:
         if pairs:
             near = "; ".join(f"{term:.4g} Hz and {multiple:g} Hz" for term, multiple in pairs)
             raise SettingsError(
-                f"the mains lies on what is to be measured ({near}). Set filter.line_removal: none, "
-                "or measure fewer harmonics."
+                f"the mains lies on what is to be measured ({near}). Set filter.line_removal: "
+                "none, or measure fewer harmonics."
             )
 
     def __call__(self, data: np.ndarray) -> np.ndarray:
@@ -455,6 +455,6 @@ def require_gains(labels: Iterable[str], gains: np.ndarray, tolerance: float) ->
     if refused:
         raise SettingsError(
             f"the filters change what is to be measured by more than {tolerance:.0%} "
-            f"({'; '.join(refused)}). Lower filter.highpass_hz, raise filter.lowpass_hz, or measure "
-            "fewer harmonics."
+            f"({'; '.join(refused)}). Lower filter.highpass_hz, raise filter.lowpass_hz, or "
+            "measure fewer harmonics."
         )

@@ -22,7 +22,7 @@ NEIGHBOURS = 10  # bins on each side of the searched range that the noise is tak
 PRESENCE_LEVEL = 0.01  # chance that noise alone passes for a response somewhere in the range
 OFFSET_LEVEL = 0.01  # chance that a response at its place passes for an offset
 INTERVAL_SD = 2.575829  # 99 % interval of a normal estimate
-STEP_LEVEL = 0.01  # chance that one lost frame is found in a whole recording without any
+STEP_LEVEL = 0.001  # chance that a lost frame is found in a recording without any
 FEWEST_PIECES = 4  # pieces of a stretch that a step or a drift can be seen in
 PIECE_CYCLES = 8  # cycles in a piece, at least
 

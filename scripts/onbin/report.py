@@ -22,15 +22,16 @@ MEASURES = {
     "amplitude_corrected_uv": "evoked amplitude less the noise's share",
     "amplitude_sum_uv": "summed amplitude of the harmonics above the bins beside them",
     "snr_db": "signal-to-noise ratio",
-    "alpha_power_db": "alpha power",
-    "alpha_power_uv2": "alpha power",
+    **dict.fromkeys(("alpha_power_db", "alpha_power_uv2"), "alpha power"),
     "alpha_lateralisation": "alpha lateralisation",
 }
 STUDY_FILES = {
     "study_participants": "who is in the study, who is set aside, and why",
+    "study_flicker": "where the EEG shows each tag's flicker",
     "study_responses": "responses: person, condition, tag, term, channel or region",
     "study_alpha": "alpha: person, condition, channel or region",
     "study_relation": "alpha and response, person by person",
+    "study_attention": "how well the attended tag can be told, person by person",
     "study_group": "alpha and response, over people",
     "study_comparisons": "the planned comparisons",
     "report_quality": "figure of the recordings",
@@ -72,12 +73,13 @@ def _nothing(why: str) -> Drawing:
 
 
 def _quality(material: Material) -> Drawing:
-    settings = material.settings
+    trust = material.settings["trust"]
+    fewest = {
+        name: trust["min_windows" if about["flickering"] else "min_rest_windows"]
+        for name, about in material.conditions.items()
+    }
     figure = figures.quality(
-        report_tables.quality(material),
-        list(material.conditions),
-        settings["sensors"]["max_bad_share"],
-        settings["trust"]["min_windows"],
+        report_tables.quality(material), fewest, material.settings["sensors"]["max_bad_share"]
     )
     return Drawing(
         figure,
@@ -221,8 +223,8 @@ def p_value(p: float | None) -> str:
     return f"= {number(p, 2)}"
 
 
-def decibel(value: float | None) -> str:
-    """Write a level in dB."""
+def tenths(value: float | None) -> str:
+    """Write a level in dB or a percentage, to one decimal."""
     if value is None or not math.isfinite(value):
         return "n/a"
     return f"{round(value, 1) + 0:.1f}".replace("-", "−")
@@ -334,7 +336,7 @@ def page(material: Material, drawings: Mapping[str, Drawing], images: Mapping[st
     )
     environment.filters |= {
         "number": number, "p_value": p_value, "words": words, "listed": listed, "people": _people,
-        "plain": plain, "decibel": decibel,
+        "plain": plain, "tenths": tenths,
     }  # fmt: skip
     shown = {
         name: {
@@ -348,15 +350,14 @@ def page(material: Material, drawings: Mapping[str, Drawing], images: Mapping[st
     return environment.get_template("report.html").render(facts(material), figures=shown)
 
 
-def listed(items: Iterable[Any], last: str = " and ") -> str:
+def listed(items: Iterable[Any]) -> str:
     """Write items one after another: a, b and c."""
     *first, end = [str(item) for item in items] or ["none"]
-    return f"{', '.join(first)}{last}{end}" if first else end
+    return f"{', '.join(first)} and {end}" if first else end
 
 
 def facts(material: Material) -> dict[str, Any]:
     """Everything that the templates tell, by name."""
-    recordings = report_tables.recording_facts(material)
     return {
         "settings": material.settings,
         "conditions": material.conditions,
@@ -366,18 +367,20 @@ def facts(material: Material) -> dict[str, Any]:
         "set_aside": [row for row in material.participants if not row["in_study"]],
         "answers": answers(material),
         "cautions": report_tables.cautions(material.tags),
+        "flicker": report_tables.flicker_findings(material),
         "plans": report_tables.flicker_plans(material),
-        "recordings": recordings,
+        "recordings": report_tables.recording_facts(material),
         "survival": report_tables.survival(material),
         "groups": report_tables.response_groups(material),
         "unmeasured": report_tables.unmeasured(material),
         "unlocked": [n for n, about in material.conditions.items() if not about["phase_locked"]],
+        "attention": report_tables.attention_groups(material),
         "alpha": report_tables.alpha_people(material),
         "relation": material.group,
         "partial": report_tables.partial_means(material),
         "methods": methods(material),
         "versions": provenance.versions(),
-        "yaml": settings_text(material.settings),
+        "yaml": settings_text(material),
         "files": {layout.FILES[name]: about for name, about in STUDY_FILES.items()},
     }
 
@@ -432,13 +435,15 @@ def spread(counts: Iterable[int]) -> str:
     return f"mean {number(np.mean(values))}, range {min(values)}–{max(values)}"
 
 
-def settings_text(settings: Mapping[str, Any]) -> str:
+def settings_text(material: Material) -> str:
     """Settings in full, as a file that this page can be made again from.
 
-    Tags stand in their own order, since f1 and f2 are counted in it.
+    Tags and comparisons stand in their own order; f1 and f2 are counted in it.
     """
     import yaml
 
-    whole = {name: value for name, value in settings.items() if name != "terms"}
-    whole["tags"] = {tag: settings["tags"][tag] for tag, _ in settings["terms"]["tags"]}
+    whole = {name: value for name, value in material.settings.items() if name != "terms"}
+    planned = [row["comparison"] for row in material.comparisons]
+    whole["tags"] = {name: whole["tags"][name] for name in material.tags}
+    whole["comparisons"] = {name: whole["comparisons"][name] for name in planned}
     return yaml.safe_dump(whole, sort_keys=False, allow_unicode=True, default_flow_style=None)

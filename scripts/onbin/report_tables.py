@@ -10,13 +10,15 @@ from typing import Any
 
 import numpy as np
 
-from onbin import arrays, figures, inference, layout, response_tables, tables, tagging
+from onbin import arrays, figures, flicker, inference, layout, response_tables, tables, tagging
+from onbin.flicker_tables import AS_SET
 from onbin.response_tables import SUM
 
 Rows = Sequence[Mapping[str, Any]]
 
 KINDS = ("channels", "gains", "sensors", "components", "windows", "cleaning")
 FUNDAMENTAL = "1f"
+ATTENTION_LEVEL = 0.05  # of telling the attended tag of one person
 # Changes of light a second that can provoke seizures, and those to which photosensitive people
 # respond most (common practice; the lower end as in WCAG 2.2, 2.3.1, and Harding et al. 2005).
 PROVOCATIVE_HZ, MOST_PROVOCATIVE_HZ = (3, 60), (15, 25)
@@ -30,6 +32,9 @@ class Plan:
     ----------
     rate : Fraction
         Sampling rate in Hz.
+    tags : tuple of (str, Fraction)
+        Frequencies used of the tags.
+    terms : tuple of Term
     samples : tuple of int
         Length of the window of each term.
     passband_hz, line_hz : float
@@ -37,13 +42,24 @@ class Plan:
     """
 
     rate: Fraction
+    tags: tuple[tuple[str, Fraction], ...]
+    terms: tuple[tagging.Term, ...]
     samples: tuple[int, ...]
     passband_hz: float
     line_hz: float
 
-    def terms(self, settings: Mapping[str, Any]) -> list[tagging.Term]:
-        """Terms, in the order of `samples`."""
-        return tagging.study_terms(settings["terms"], self.passband_hz)
+    @classmethod
+    def of(cls, stored: Mapping[str, np.ndarray], settings: Mapping[str, Any]) -> "Plan":
+        """Take it from what the step spectra leaves."""
+        coefficients = response_tables.Coefficients.of(stored, settings["terms"])
+        return cls(
+            rate=Fraction(str(stored["rate"])),
+            tags=tuple(coefficients.tags.items()),
+            terms=tuple(coefficients.terms),
+            samples=tuple(stored["samples"].tolist()),
+            passband_hz=coefficients.passband_hz,
+            line_hz=settings["filter"]["line_hz"] or float(stored["line_hz"]),
+        )
 
     def neighbours(
         self, settings: Mapping[str, Any], index: int, flickering: Sequence[str]
@@ -51,10 +67,10 @@ class Plan:
         """Frequencies of a term's neighbouring bins, and which of them hold noise only."""
         response = settings["response"]
         offsets = tagging.neighbour_offsets(response["neighbours"], response["skip"])
-        frequency = self.terms(settings)[index].frequency
+        frequency = self.terms[index].frequency
         duration_s = self.samples[index] / self.rate
         occupied = response_tables.occupied(
-            tagging.study_tags(settings["terms"]),
+            dict(self.tags),
             flickering,
             response["intermodulation_order"],
             self.passband_hz,
@@ -74,8 +90,10 @@ class Material:
     ----------
     settings : mapping
         The whole settings, and ``terms``.
-    participants, responses, alpha, relation, comparisons, group, relation_windows : rows
+    participants, flicker, responses, alpha, relation, attention, comparisons, group : rows
         The study's tables.
+    relation_windows : rows
+        Everybody's.
     recordings : mapping
         Tables of each recording, by its name and by `KINDS`.
     plans : mapping
@@ -90,9 +108,11 @@ class Material:
 
     settings: Mapping[str, Any]
     participants: Rows
+    flicker: Rows
     responses: Rows
     alpha: Rows
     relation: Rows
+    attention: Rows
     comparisons: Rows
     group: Rows
     relation_windows: Rows
@@ -135,12 +155,7 @@ def read(inputs: SimpleNamespace, settings: Mapping[str, Any]) -> Material:
     plans, amplitudes_uv, spectra = {}, {}, []
     for row, coefficients, psd in zip(participants, inputs.coefficients, inputs.psd, strict=True):
         who, stored = row["participant"], arrays.read(coefficients)
-        plans[who] = Plan(
-            Fraction(str(stored["rate"])),
-            tuple(stored["samples"].tolist()),
-            float(stored["passband_hz"]),
-            settings["filter"]["line_hz"] or float(stored["line_hz"]),
-        )
+        plans[who] = Plan.of(stored, settings)
         amplitudes_uv[who] = _amplitudes(stored, settings)
         spectra += _spectra(row, arrays.read(psd), settings)
     recordings: dict[str, dict[str, Rows]] = {}
@@ -148,7 +163,7 @@ def read(inputs: SimpleNamespace, settings: Mapping[str, Any]) -> Material:
         for path in getattr(inputs, kind):
             name = Path(path).name.partition("_desc-")[0]
             recordings.setdefault(name, {})[kind] = tables.read_table(path)
-    study = ("responses", "alpha", "relation", "comparisons", "group")
+    study = ("flicker", "responses", "alpha", "relation", "attention", "comparisons", "group")
     return Material(
         settings=settings,
         participants=participants,
@@ -230,7 +245,7 @@ def flicker_plans(material: Material) -> list[dict[str, Any]]:
 
 
 def _term_rows(material: Material, plan: Plan) -> Iterator[dict[str, Any]]:
-    settings, terms = material.settings, plan.terms(material.settings)
+    settings, terms = material.settings, plan.terms
     low_hz, high_hz = settings["alpha"]["band_hz"]
     patterns: dict[tuple[str, ...], list[str]] = {}
     for name, about in material.conditions.items():
@@ -260,6 +275,29 @@ def _term_rows(material: Material, plan: Plan) -> Iterator[dict[str, Any]]:
         }
 
 
+def flicker_findings(material: Material) -> dict[str, Any]:
+    """Where the EEG shows the flicker: counts of verdicts, and the rows that need a look.
+
+    A row needs one where the flicker is elsewhere than set, cannot be told, drifts, loses frames,
+    or where the frequency found was adopted.
+    """
+    return {
+        "counts": Counter(row["flicker_verdict"] for row in material.flicker),
+        "rows": [row for row in material.flicker if _needs_a_look(row)],
+        "lost": [
+            row
+            for row in material.flicker
+            if row["flicker_verdict"] == flicker.OFFSET and row["frequency_source"] == AS_SET
+        ],
+    }
+
+
+def _needs_a_look(row: Mapping[str, Any]) -> bool:
+    still = not row["drift_low_hz_per_min"] > 0 and not row["drift_high_hz_per_min"] < 0
+    as_set = row["flicker_verdict"] == flicker.AS_SET and row["frequency_source"] == AS_SET
+    return not as_set or not still or bool(row["phase_steps"])
+
+
 def neighbourhoods(material: Material) -> list[figures.Neighbourhood]:
     """Everybody's amplitude at each tag and its neighbouring bins, of the people in the study.
 
@@ -267,16 +305,17 @@ def neighbourhoods(material: Material) -> list[figures.Neighbourhood]:
     are those of the first person.
     """
     found = []
-    for tag, frequency in material.tags.items():
+    for tag in material.tags:
         for condition, about in material.conditions.items():
             rows_uv, plan = [], None
             for who in material.in_study:
-                terms = material.plans[who].terms(material.settings)
+                terms = material.plans[who].terms
                 index = next((i for i, t in enumerate(terms) if t.tag == tag), None)
                 if index is not None and condition in material.amplitudes_uv[who]:
                     rows_uv.append(material.amplitudes_uv[who][condition][index])
                     plan = plan or (material.plans[who], index)
             if plan:
+                frequency = plan[0].terms[plan[1]].frequency
                 beside, usable = plan[0].neighbours(material.settings, plan[1], about["flickering"])
                 found.append(
                     figures.Neighbourhood(
@@ -431,6 +470,32 @@ def _cell(rows: Rows) -> dict[str, Any]:
         "snr_db": np.mean([row["snr_db"] for row in rows]),
         "detected": None if total else sum(row["present"] for row in rows),
     }
+
+
+def attention_groups(material: Material) -> list[dict[str, Any]]:
+    """How well the attended tag can be told, over the people in the study."""
+    rows = [row for row in material.attention if row["in_study"]]
+    found = []
+    for tags in dict.fromkeys(row["attended_tags"] for row in rows):
+        told = [row for row in rows if row["attended_tags"] == tags]
+        unknown = [(row["participant"], row["reason"]) for row in told if row["reason"]]
+        for decision in dict.fromkeys(row["decision"] for row in told if not row["reason"]):
+            known = [row for row in told if row["decision"] == decision and not row["reason"]]
+            found.append(
+                {
+                    "tags": tags,
+                    "decision": decision,
+                    "unknown": unknown,
+                    "n": len(known),
+                    "decision_s": np.mean([row["decision_s"] for row in known]),
+                    "accuracies": [row["accuracy"] for row in known],
+                    "chance": known[0]["chance"],
+                    "above": sum(row["accuracy_p"] <= ATTENTION_LEVEL for row in known),
+                }
+            )
+        if len(unknown) == len(told):
+            found.append({"tags": tags, "decision": None, "unknown": unknown, "n": 0})
+    return found
 
 
 def map_rows(material: Material) -> list[figures.MapRow]:

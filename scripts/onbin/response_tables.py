@@ -23,6 +23,11 @@ class Coefficients:
     values_uv : ndarray of complex, shape (n_windows, n_sites, n_terms, n_bins)
         Bin 0 is the term, the others lie beside it.
     terms : list of Term
+        At the frequencies used.
+    tags : dict of str to Fraction
+        Frequencies used of the tags.
+    measured : set of str
+        Tags whose frequency was measured and adopted.
     bins : ndarray of int, shape (n_bins,)
     durations_s : list of Fraction, one for each term
         Length of its window; the inverse is the width of a bin.
@@ -34,6 +39,8 @@ class Coefficients:
 
     values_uv: np.ndarray
     terms: list[Term]
+    tags: dict[str, Fraction]
+    measured: set[str]
     bins: np.ndarray
     durations_s: list[Fraction]
     passband_hz: float
@@ -51,9 +58,13 @@ class Coefficients:
         rate = Fraction(str(stored["rate"]))
         names = ("condition", "recording", "trial", "window", "site", "site_kind", "site_channels")
         passband_hz = float(stored["passband_hz"])
+        names_of_tags = tagging.study_tags(terms)
+        tags = dict(zip(names_of_tags, map(Fraction, stored["used"]), strict=True))
         return cls(
             values_uv=stored["coefficients_uv"].astype(complex),
-            terms=tagging.study_terms(terms, passband_hz),
+            terms=tagging.retuned(tagging.study_terms(terms, passband_hz), tags),
+            tags=tags,
+            measured=set(stored["measured"].tolist()),
             passband_hz=passband_hz,
             bins=stored["bins"],
             durations_s=[int(n) / rate for n in stored["samples"]],
@@ -63,6 +74,11 @@ class Coefficients:
     def at(self, condition: str, term: int) -> np.ndarray:
         """Coefficients of a condition at a term, shape (n_windows, n_sites, n_bins)."""
         return self.values_uv[self.condition == condition][:, :, term]
+
+    def source(self, term: Term) -> str:
+        """Where the frequency of a term comes from."""
+        measured = any(name in self.measured for name, _ in term.orders)
+        return "measured" if measured else "as set"
 
     def site_columns(self, index: int) -> dict[str, str]:
         """The columns that say where."""
@@ -134,6 +150,7 @@ def response_rows(
                 "tag": term.tag,
                 "term": term.term,
                 "frequency_hz": float(term.frequency),
+                "frequency_source": coefficients.source(term),
                 "driven": driven,
             }
             yield from _rows(coefficients, common, measured)

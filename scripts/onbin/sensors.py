@@ -509,37 +509,3 @@ def interpolate_and_reference(
         raw.set_eeg_reference(reference, verbose="error")
     rank = len(locations_m) - len(bad) - (reference is not None)
     return Referenced(raw, interpolated, left_out, rank)
-
-
-def cleaning_matrix(
-    raw,
-    bad: Sequence[str],
-    reference: str | Sequence[str] | None,
-) -> tuple[np.ndarray, list[str]]:
-    """Write interpolation and reference as one matrix, channels by channels.
-
-    Unit impulses, one channel after another, go through them. The removal of components is a
-    matrix of its own, which comes after this one.
-
-    Parameters
-    ----------
-    raw : mne.io.Raw
-        The recording before interpolation; only its EEG channels and their positions are used.
-    bad : sequence of str
-        Interpolated channels.
-    reference : "average", list of str or None
-        As in `interpolate_and_reference`.
-
-    Returns
-    -------
-    matrix : ndarray, shape (n_channels_after, n_channels_before)
-        The chain.
-    names : list of str
-        Channels after it, the rows.
-    """
-    import mne
-
-    info = mne.pick_info(raw.info, mne.pick_types(raw.info, eeg=True, exclude=[]))
-    impulses = mne.io.RawArray(np.eye(len(info.ch_names)), info, verbose="error")
-    cleaned = interpolate_and_reference(impulses, bad, reference).raw
-    return cleaned.get_data(), list(cleaned.ch_names)

@@ -14,7 +14,7 @@ from typing import Annotated, Any, Literal
 import yaml
 from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 
-from onbin import tagging
+from onbin import plan, tagging
 from onbin.errors import SettingsError
 
 Label = Annotated[str, Field(pattern=r"^[a-z][a-z0-9_]*$")]
@@ -58,6 +58,36 @@ class Display(Part):
     refresh_hz: ExactNumber | None = Field(
         None, description="Refresh rate in Hz, as measured if it was: 59.94 is not 60."
     )
+    size_m: Interval | None = Field(
+        None, description="Width and height in m; none takes what the dataset says."
+    )
+    distance_m: Positive | None = Field(
+        None, description="Distance from the eyes in m; none takes what the dataset says."
+    )
+
+
+class Adoption(Part):
+    """A tag whose measured frequency is used in place of the one that was set."""
+
+    tag: Label
+    recordings: list[str] = Field(
+        [],
+        description="Recordings by their BIDS entities, such as sub-05 or sub-05_run-2; empty "
+        "takes all.",
+    )
+
+
+class Flicker(Part):
+    """How the true frequency of the flicker is found, and where it is used."""
+
+    photodiode: str | None = Field(
+        None, description="Channel that recorded the light or a pulse a cycle, if one did."
+    )
+    adopt: list[Adoption] = Field(
+        [],
+        description="Tags whose measured frequency is used; where it cannot be told, the one set "
+        "is.",
+    )
 
 
 class Tag(Part):
@@ -68,6 +98,14 @@ class Tag(Part):
     )
     frequency_hz: ExactNumber | None = Field(
         None, description="Frequency in Hz, as a number or a ratio such as 120/7."
+    )
+    waveform: Literal["square", "sine"] = Field(
+        "square",
+        description="square is on and off by whole frames; sine is luminance sampled from a sine, "
+        "which needs 3 frames a cycle or more, whole or not.",
+    )
+    pattern_reversal: bool = Field(
+        False, description="Whether it reverses a pattern, which happens twice in a cycle."
     )
 
     @model_validator(mode="after")
@@ -82,8 +120,8 @@ class Condition(Part):
 
     events: dict[str, str | int | float] = Field(
         description="Column of events.tsv and the value that it must have; all of several. A BIDS "
-        "entity (task, ses, acq, run) may stand in place of a column; entities alone make each such "
-        "recording one trial.",
+        "entity (task, ses, acq, run) may stand in place of a column; entities alone make each "
+        "such recording one trial.",
         min_length=1,
     )
     flickering: list[Label] = Field(
@@ -146,7 +184,7 @@ class Components(Part):
         "picard", description="ICA algorithm (extended where it can be); none leaves ICA out."
     )
     remove: dict[ComponentClass, Share] = Field(
-        {"eye": 0.7, "muscle": 0.8, "heart": 0.8, "channel noise": 0.9},
+        {"eye": 0.7, "muscle": 0.9, "heart": 0.9, "channel noise": 0.9},
         description="Classes that are removed, and the least probability for it.",
     )
     max_tag_share: Share = Field(
@@ -278,6 +316,7 @@ class Settings(Part):
     study: Study
     dataset: Dataset
     display: Display = Display()
+    flicker: Flicker = Flicker()
     tags: dict[Label, Tag] = Field({}, description="Frequency tags by name.")
     conditions: dict[Label, Condition] = Field(min_length=1, description="Conditions by name.")
     regions: dict[Label, list[str]] = Field(
@@ -577,6 +616,10 @@ def _reference_problems(raw: dict) -> Iterator[Problem]:
         ):
             where = ("conditions", name, "attended")
             yield where, f"{attended!r} does not flicker in this condition"
+    adopted = part("flicker").get("adopt")
+    for index, adoption in enumerate(adopted if isinstance(adopted, list) else []):
+        if isinstance(adoption, dict):
+            yield from check("tags", adoption.get("tag"), "flicker", "adopt", index, "tag")
     for key in ("region", "right_region", "left_region"):
         yield from check("regions", part("alpha").get(key), "alpha", key)
     yield from check(
@@ -599,31 +642,18 @@ def _reference_problems(raw: dict) -> Iterator[Problem]:
 
 def _plan_problems(settings: Settings) -> Iterator[Problem]:
     """What cannot be measured as the settings stand."""
-    frequencies: dict[str, Fraction] = {}
-    for key in ("refresh_hz",):
-        value = settings.display.refresh_hz
-        if value is not None and not _is_positive(value):
-            yield ("display", key), f"must be a positive number or ratio, found {value!r}"
-            return
+    refresh = settings.display.refresh_hz
+    if refresh is not None and not _is_positive(refresh):
+        where = ("display", "refresh_hz")
+        yield where, f"must be a positive number or ratio, found {refresh!r}"
+        return
     for name, tag in settings.tags.items():
         if tag.frequency_hz is not None and not _is_positive(tag.frequency_hz):
             where = ("tags", name, "frequency_hz")
             yield where, f"must be a positive number or ratio, found {tag.frequency_hz!r}"
             return
-    frequencies = settings.tag_frequencies
-    for name, frequency in frequencies.items():
-        if frequency * tagging.exact(settings.windows.length_s) < 1:
-            yield (
-                ("windows", "length_s"),
-                f"{settings.windows.length_s} s is shorter than one cycle of {name} "
-                f"({float(frequency):.4g} Hz); at least {float(1 / frequency):.3g} s is needed",
-            )
-        if frequency <= tagging.exact(settings.filter.highpass_hz):
-            yield (
-                ("filter", "highpass_hz"),
-                f"{settings.filter.highpass_hz} Hz takes out {name} ({float(frequency):.4g} Hz); "
-                "lower it",
-            )
+    for finding in plan.blocking(part(settings, *plan.SETTINGS)):
+        yield finding.where, f"{finding.found}; {finding.advice}"
     for name, comparison in settings.comparisons.items():
         if not comparison.measure.startswith("alpha"):
             for side in ("plus", "minus"):

@@ -4,7 +4,7 @@ Nothing here is rounded: a tag of 10 frames on a 144 Hz display is 72/5 Hz until
 """
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
 from math import gcd, lcm
 
@@ -120,6 +120,13 @@ def study_terms(settings: Mapping, below_hz: float) -> list[Term]:
     terms = harmonics(tags, settings["harmonics"])
     terms += intermodulations(tags, settings["intermodulation_order"])
     return [term for term in terms if term.frequency < below_hz]
+
+
+def retuned(terms: Iterable[Term], tags: Mapping[str, Fraction]) -> list[Term]:
+    """Give terms the frequencies that follow from other frequencies of their tags."""
+    return [
+        replace(term, frequency=sum(n * tags[name] for name, n in term.orders)) for term in terms
+    ]
 
 
 def study_tags(settings: Mapping) -> dict[str, Fraction]:

@@ -49,8 +49,8 @@ class WindowLimits:
     """What a window may show at most.
 
     A condition's own limit is ``median + mad_factor * 1.4826 * MAD`` of the figure over its
-    windows, since strong alpha with closed eyes is no artifact, held within the absolute bounds given here (lowest limit, highest limit). The factor
-    and the bounds are common practice.
+    windows, since strong alpha with closed eyes is no artifact. It is held within the absolute
+    bounds given here (lowest limit, highest limit). The factor and the bounds are common practice.
 
     Attributes
     ----------

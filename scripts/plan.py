@@ -1,0 +1,111 @@
+"""The flicker plan: where every term of every tag lies, what that costs, and what to do."""
+
+import json
+from functools import cache
+from pathlib import Path
+
+from onbin import filtering, layout, plan, plan_page, tables
+from onbin.errors import DataError, SettingsError
+from onbin.plan import Recorded
+from onbin.runner import run
+
+COLUMNS = [
+    "working_rate_hz", "recordings", "term_kind", "tag", "term", "frequency_hz", "frequency_exact",
+    "frames_per_cycle", "planned_driven", "measured", "n_samples", "window_s", "cycles",
+    "planned_neighbours", "neighbours_left_out", "collides_with", "crowds", "in_alpha",
+    "half_in_alpha", "planned_gain",
+]  # fmt: skip
+
+
+def plan_flicker(inputs, outputs, settings):
+    """Plan from settings and metadata; no recording is opened."""
+    chosen = settings["dataset"]
+    recordings = layout.find_recordings(chosen["folder"], chosen["tasks"], chosen["participants"])
+    recorded = [read_metadata(recording.files) for recording in recordings]
+    plans = {}
+    for setup in plan.setups(settings, recorded):
+        refuse(plan.blocking(settings, setup))
+        gains = filter_gains(settings, setup)
+        refuse(plan.changed_by_filters(settings, gains))
+        plans[setup] = plan.planned_terms(settings, setup, gains)
+
+    rows = (plan.term_row(settings, setup, p) for setup, terms in plans.items() for p in terms)
+    tables.write_table(outputs.terms, rows, COLUMNS)
+    Path(outputs.page).write_text(plan_page.page(settings, recorded, plans), encoding="utf-8")
+
+
+def refuse(stops):
+    """Stop with everything that cannot work, and what to do."""
+    told = [f"  {'.'.join(map(str, s.where))}: {s.found}; {s.advice}." for s in stops]
+    if told:
+        raise SettingsError("the flicker plan cannot work.\n" + "\n".join(told))
+
+
+def filter_gains(settings, setup):
+    """Gain at each measured term through decimation and the filters."""
+    terms = plan.measured_terms(settings, setup)
+    if not terms:
+        return {}
+    frequencies_hz = [float(term.frequency) for term in terms]
+    chosen = settings["filter"]
+    chain = filtering.FilterChain.design(
+        float(setup.working_rate),
+        chosen["highpass_hz"],
+        plan.passband_hz(settings, setup),
+        setup.line_hz,
+        chosen["line_removal"],
+    )
+    gains = abs(chain.gains(frequencies_hz))
+    if setup.factor > 1:
+        antialias = filtering.design_antialias(float(setup.recorded_rate), setup.factor)
+        gains = gains * antialias.gain(frequencies_hz)
+    return dict(zip(terms, gains.tolist(), strict=True))
+
+
+def read_metadata(files):
+    """What the JSON files that apply to a recording tell; the most specific goes first.
+
+    ``files`` are those of `layout.Recording`: its own folder's first, then the inherited ones from
+    the top of the dataset down.
+    """
+    recording = Path(files[0]).parent
+    own, inherited = [], []
+    for path in files:
+        (own if Path(path).parent == recording else inherited).append(path)
+    told = {"eeg": {}, "events": {}}
+    for path in [*inherited, *sorted(own, key=len)]:  # a name with more entities is more specific
+        kind = Path(path).stem.rsplit("_", 1)[-1]
+        if path.endswith(".json") and kind in told:
+            told[kind] |= _read_json(path)
+    screen = told["events"].get("StimulusPresentation")
+    screen = screen if isinstance(screen, dict) else {}
+    size = screen.get("ScreenSize")
+    size_m = tuple(map(_positive, size)) if isinstance(size, list) and len(size) == 2 else (None,)
+    return Recorded(
+        rate_hz=_positive(told["eeg"].get("SamplingFrequency")),
+        line_hz=_positive(told["eeg"].get("PowerLineFrequency")),
+        refresh_hz=_positive(screen.get("ScreenRefreshRate")),
+        distance_m=_positive(screen.get("ScreenDistance")),
+        size_m=size_m if all(size_m) else None,
+    )
+
+
+@cache
+def _read_json(path):
+    try:
+        read = json.loads(Path(path).read_text(encoding="utf-8-sig"))
+    except ValueError as error:
+        raise DataError(f"{path} is not valid JSON ({error}); correct it.") from None
+    if not isinstance(read, dict):
+        raise DataError(f"{path} holds no JSON object; expected {{...}} with keys and values.")
+    return read
+
+
+def _positive(value):
+    """Take a number above 0; anything else, such as n/a, is not known."""
+    is_number = isinstance(value, int | float) and not isinstance(value, bool)
+    return float(value) if is_number and value > 0 else None
+
+
+if "snakemake" in globals():
+    run(plan_flicker, snakemake)  # noqa: F821
