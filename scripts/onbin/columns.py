@@ -220,7 +220,11 @@ COLUMNS = {
         source=MEIGEN_BACH,
     ),
     "snr_db": Column("10·log10(snr).", "dB"),
-    "snr_p": Column("p of the SNR by its F distribution.", null="uniform"),
+    "snr_p": Column(
+        "p of the SNR by its F distribution.",
+        null="uniform where noise is level over the neighbouring bins; in 1/f noise below about "
+        "12 Hz larger, but smaller where bins below the term are missing, about 2 Hz",
+    ),
     "amplitude_ratio": Column(
         "|X̄| over the mean amplitude of the neighbouring bins; a description, not a test."
     ),

@@ -5,6 +5,7 @@ heavy. `blocking` tells what cannot work, `planned_terms` what lies where, `find
 """
 
 import math
+from bisect import bisect_left, bisect_right
 from collections import Counter, defaultdict
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
@@ -31,6 +32,7 @@ SETTINGS = (
     "alpha.search_hz",
 )
 FRAME_TOLERANCE = Fraction(1, 1000)  # how far a nominal frequency may be from whole frames
+OUTSIDE = "outside the filters"
 LINE_REACH_HZ = Fraction(1, 2)  # how far the removal of the mains reaches, as the step filter does
 DRIVEN_BELOW_HZ = 200  # responses to flicker are lost in the noise well below (common practice)
 
@@ -124,8 +126,8 @@ class Planned:
         Of its window; None where it is not measured.
     neighbours : int or None
         Neighbouring bins that can be used, the fewest over the conditions that drive it.
-    left_out : str
-        The others, in bins from the term, and why.
+    left_out : tuple of (str, tuple of int)
+        What lies on the others, and which they are, in bins from the term.
     collides : tuple of Term
         Terms closer than one bin.
     crowds : tuple of Term
@@ -139,7 +141,7 @@ class Planned:
     driven: bool
     samples: int | None = None
     neighbours: int | None = None
-    left_out: str = ""
+    left_out: tuple[tuple[str, tuple[int, ...]], ...] = ()
     collides: tuple[Term, ...] = ()
     crowds: tuple[Term, ...] = ()
     gain: float | None = None
@@ -414,10 +416,10 @@ def planned_terms(
     length_s = settings["windows"]["length_s"]
     samples = tagging.window_samples(tags, measured, setup.working_rate, length_s) if tags else {}
     kinds = _every_term(settings, setup)
+    in_order = sorted(kinds, key=lambda term: term.frequency)
+    places = [term.frequency for term in in_order]
     end_hz = passband_hz(settings, setup)
-    offsets = tagging.neighbour_offsets(
-        settings["response"]["neighbours"], settings["response"]["skip"]
-    )
+    count, skip = settings["response"]["neighbours"], settings["response"]["skip"]
     collides: dict[Term, list[Term]] = defaultdict(list)
     crowds: dict[Term, list[Term]] = defaultdict(list)
     beside = {}
@@ -425,16 +427,22 @@ def planned_terms(
     for term in measured:
         duration_s = samples[term] / setup.working_rate
         together = [tags for tags in sets if term.driven_by(tags)] or sets or [()]
-        bins = {j: term.frequency + j / duration_s for j in offsets}
-        met = [o for o in kinds if o != term and any(o.driven_by(tags) for tags in together)]
-        for other in met:
-            if abs(other.frequency - term.frequency) * duration_s < 1:
-                collides[term].append(other)
-                collides[other].append(term)
-            elif any(abs(b - other.frequency) * duration_s < 1 for b in bins.values()):
-                crowds[other].append(term)
+        bins = {j: term.frequency + j / duration_s for j in tagging.neighbour_offsets(count, skip)}
+        reach = (skip + count + 1) / duration_s
+        first = bisect_left(places, term.frequency - reach)
+        last = bisect_right(places, term.frequency + reach)
+        near = [other for other in in_order[first:last] if other != term]
+        for other in near:
+            if any(other.driven_by(tags) for tags in together):
+                apart_bins = abs(other.frequency - term.frequency) * duration_s
+                if apart_bins < 1:
+                    collides[term].append(other)
+                    collides[other].append(term)
+                elif skip < apart_bins < skip + count + 1:
+                    crowds[other].append(term)
+        noisy = [o for o in near if kinds[o] != "alias" and o.frequency != term.frequency]
         beside[term] = min(
-            (_beside(term, bins, duration_s, kinds, tags, end_hz) for tags in together),
+            (_beside(term, bins, duration_s, noisy, tags, end_hz) for tags in together),
             key=lambda found: found[0],
         )
     return [
@@ -443,7 +451,7 @@ def planned_terms(
             term,
             any(term.driven_by(tags) for tags in sets),
             samples.get(term),
-            *beside.get(term, (None, "")),
+            *beside.get(term, (None, ())),
             tuple(dict.fromkeys(collides[term])),
             tuple(crowds[term]),
             (gains or {}).get(term),
@@ -518,12 +526,12 @@ def _beside(
     term: Term,
     bins: Mapping[int, Fraction],
     duration_s: Fraction,
-    kinds: Mapping[Term, Kind],
+    noisy: Sequence[Term],
     tags: Sequence[str],
     end_hz: float,
-) -> tuple[int, str]:
+) -> tuple[int, tuple[tuple[str, tuple[int, ...]], ...]]:
     """How many neighbouring bins can be used where some tags flicker, and why not the others."""
-    others = [o for o, kind in kinds.items() if kind != "alias" and o.driven_by(tags)]
+    others = [o for o in noisy if o.driven_by(tags)]
     usable = tagging.usable_neighbours(
         term.frequency, bins, duration_s, [o.frequency for o in others], end_hz
     )
@@ -531,17 +539,11 @@ def _beside(
     for (offset, place), is_usable in zip(bins.items(), usable, strict=True):
         if not is_usable:
             inside = 1 / duration_s < place <= end_hz
-            near = [o for o in others if o.frequency != term.frequency] if inside else []
-            nearest = min(near, key=lambda o: abs(o.frequency - place), default=None)
-            reasons[label(nearest) if nearest else "outside the filters"].append(offset)
-    return sum(usable), "; ".join(f"{_bins(found)} ({why})" for why, found in reasons.items())
-
-
-def _bins(offsets: Sequence[int]) -> str:
-    first, last = offsets[0], offsets[-1]
-    if last - first >= 2 and last - first == len(offsets) - 1:
-        return f"bins {first:+d} to {last:+d}"
-    return f"bin{'s' * (len(offsets) > 1)} {' '.join(f'{j:+d}' for j in offsets)}"
+            why = OUTSIDE
+            if inside:
+                why = label(min(others, key=lambda o: abs(o.frequency - place)))
+            reasons[why].append(offset)
+    return sum(usable), tuple((why, tuple(found)) for why, found in reasons.items())
 
 
 def term_row(settings: Mapping, setup: Setup, planned: Planned) -> dict[str, Any]:
@@ -563,7 +565,9 @@ def term_row(settings: Mapping, setup: Setup, planned: Planned) -> dict[str, Any
         "window_s": float(duration_s) if duration_s else None,
         "cycles": float(term.frequency * duration_s) if duration_s else None,
         "planned_neighbours": planned.neighbours,
-        "neighbours_left_out": planned.left_out,
+        "neighbours_left_out": "; ".join(
+            f"{why}: {' '.join(f'{j:+d}' for j in bins)}" for why, bins in planned.left_out
+        ),
         "collides_with": "; ".join(map(label, planned.collides)),
         "crowds": "; ".join(map(label, planned.crowds)),
         "in_alpha": in_alpha(settings, term.frequency),
@@ -588,8 +592,8 @@ def alpha_band(settings: Mapping) -> tuple[float, float]:
 
 
 def label(term: Term) -> str:
-    """Name of a term with its tag, such as ``left_panel 2f``."""
-    return f"{term.tag} {term.term}"
+    """Name of a term: ``left_panel 2f``, or ``f1+f2``, where the numbers say the tags."""
+    return term.term if len(term.orders) > 1 else f"{term.tag} {term.term}"
 
 
 def hertz(frequency: Fraction) -> str:

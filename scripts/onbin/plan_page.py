@@ -2,8 +2,10 @@
 
 import math
 import textwrap
-from collections import Counter
+from collections import Counter, defaultdict
 from collections.abc import Iterable, Iterator, Mapping, Sequence
+from dataclasses import replace
+from fractions import Fraction
 
 import numpy as np
 
@@ -29,14 +31,17 @@ def findings(
 ) -> list[Finding]:
     """Find what the plan costs and what is as well to know, cautions first."""
     found = [*_display_findings(settings, recorded), *_tag_findings(settings)]
+    rates: dict[Finding, list[str]] = defaultdict(list)
     for setup, planned in plans.items():
-        at = f"at {float(setup.working_rate):g} Hz: " if len(plans) > 1 else ""
         for finding in (
             *_window_findings(settings, setup),
             *_term_findings(settings, setup, planned),
         ):
-            found.append(Finding(finding.level, finding.where, at + finding.found, finding.advice))
-    return sorted(dict.fromkeys(found), key=lambda finding: finding.level != "caution")
+            rates[finding].append(f"{float(setup.working_rate):g}")
+    for finding, where in rates.items():
+        at = f"at {_listed(where)} Hz: " if len(where) < len(plans) else ""
+        found.append(replace(finding, found=at + finding.found))
+    return sorted(found, key=lambda finding: finding.level != "caution")
 
 
 def _display_findings(settings: Mapping, recorded: Sequence[Recorded]) -> Iterator[Finding]:
@@ -277,28 +282,33 @@ def rectangle_sr(width_m: float, height_m: float, distance_m: float) -> float:
     return 4 * math.asin(a * b / math.sqrt((1 + a * a) * (1 + b * b)))
 
 
+RISKS = {
+    "most": "STRONG CAUTION: {}. From 15 to 25 a second flicker provokes seizures most easily.",
+    "provocative": "CAUTION: {}. From 3 to 60 a second flicker can provoke seizures in "
+    "photosensitive people, also in those who do not know that they are.",
+    "outside": "{}: outside 3 to 60 a second, which by itself clears nothing.",
+}
+
+
+def _risk(rate: Fraction) -> str:
+    for risk, (low, high) in (("most", MOST_PROVOCATIVE_HZ), ("provocative", PROVOCATIVE_HZ)):
+        if low <= rate <= high:
+            return risk
+    return "outside"
+
+
 def safety(settings: Mapping, recorded: Sequence[Recorded]) -> list[str]:
     """Paragraphs of caution for photosensitive people; a clearance never.
 
     The ranges are those of Harding et al. 2005 and later reviews, the area is that of WCAG 2.3.1.
     """
-    lines = []
+    told: dict[str, list[str]] = defaultdict(list)
     for name, frequency in tagging.study_tags(settings["terms"]).items():
         reversing = settings["tags"][name]["pattern_reversal"]
         rate = 2 * frequency if reversing else frequency
-        told = f"{name} {'reverses' if reversing else 'flashes'} {float(rate):.4g} times a second"
-        if MOST_PROVOCATIVE_HZ[0] <= rate <= MOST_PROVOCATIVE_HZ[1]:
-            lines.append(
-                f"STRONG CAUTION: {told}. From 15 to 25 a second flicker provokes seizures most "
-                "easily."
-            )
-        elif PROVOCATIVE_HZ[0] <= rate <= PROVOCATIVE_HZ[1]:
-            lines.append(
-                f"CAUTION: {told}. From 3 to 60 a second flicker can provoke seizures in "
-                "photosensitive people, also in those who do not know that they are."
-            )
-        else:
-            lines.append(f"{told}. That this is outside 3-60 a second clears nothing.")
+        unit = "reversals" if reversing else "flashes"
+        told[_risk(rate)].append(f"{name} ({float(rate):.4g} {unit} a second)")
+    lines = [RISKS[risk].format(_listed(told[risk])) for risk in RISKS if risk in told]
     if not lines:
         return []
     display = settings["display"]
@@ -341,7 +351,7 @@ def page(
         return "\n".join([*lines, "The settings name no tags: nothing flickers.", ""])
     found = findings(settings, recorded, plans)
     lines += [*_display_lines(settings, recorded), "", _verdict(found), "", "Tags"]
-    lines += _table(["tag", "frequency", "frames", "shown as"], _tag_cells(settings))
+    lines += _table(["", "tag", "frequency", "frames", "shown as"], _tag_cells(settings))
     for setup, planned in plans.items():
         lines += ["", *_setup_lines(settings, setup, planned)]
     if found:
@@ -377,7 +387,8 @@ def _verdict(found: Sequence[Finding]) -> str:
 
 
 def _tag_cells(settings: Mapping) -> Iterator[list[str]]:
-    for name, frequency in tagging.study_tags(settings["terms"]).items():
+    tags = tagging.study_tags(settings["terms"])
+    for number, (name, frequency) in enumerate(tags.items(), start=1):
         frames, waveform = plan.frames_of(settings, name), settings["tags"][name]["waveform"]
         shown = {"sine": "sine luminance", "square": "as set, by no display"}[waveform]
         if frames and waveform == "square":
@@ -386,7 +397,7 @@ def _tag_cells(settings: Mapping) -> Iterator[list[str]]:
             shown = "sampled sine luminance"
         if settings["tags"][name]["pattern_reversal"]:
             shown += f"; {float(2 * frequency):.5g} reversals a second"
-        yield [name, plan.hertz(frequency), str(frames or "-"), shown]
+        yield [f"f{number}", name, plan.hertz(frequency), str(frames or "-"), shown]
 
 
 def _setup_lines(settings: Mapping, setup: Setup, planned: Sequence[Planned]) -> list[str]:
@@ -403,10 +414,10 @@ def _setup_lines(settings: Mapping, setup: Setup, planned: Sequence[Planned]) ->
     if len(windows) == 1:
         window_s = windows[0] / setup.working_rate
         lines.append(
-            f"  One window for all: {windows[0]} samples, {plan.seconds(window_s)}, bins "
+            f"  One window for all: {windows[0]} samples, {float(window_s):.5g} s, bins "
             f"{float(1 / window_s):.4g} Hz apart."
         )
-    names = ["term", "Hz", "window", "cycles", "neighbours", "gain", "beside it"]
+    names = ["term", "Hz", "window", "cycles", "neighbours", "gain", "on the other neighbours"]
     lines += _table(names, (_term_cells(settings, setup, p) for p in measured))
     quiet = [p for p in planned if not p.measured and p.kind != "alias" and p.driven]
     if quiet:
@@ -420,14 +431,13 @@ def _term_cells(settings: Mapping, setup: Setup, planned: Planned) -> list[str]:
     window_s = planned.samples / setup.working_rate
     cycles = planned.term.frequency * window_s
     beside = [f"in one bin with {plan.label(other)}" for other in planned.collides]
-    if planned.left_out:
-        beside.append(f"without {planned.left_out}")
+    beside += [why for why, _ in planned.left_out]
     if not planned.driven:
         beside.append("driven in no condition")
     return [
         plan.label(planned.term),
         f"{float(planned.term.frequency):.6g}",
-        plan.seconds(window_s),
+        f"{float(window_s):.5g} s",
         str(cycles) if cycles.denominator == 1 else f"{float(cycles):.3f}",
         f"{planned.neighbours} of {2 * settings['response']['neighbours']}",
         "" if planned.gain is None else f"{planned.gain:.3f}",

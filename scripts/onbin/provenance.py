@@ -17,7 +17,7 @@ BIDS_VERSION = "1.10.0"
 # What BIDS has no names for yet (spectra, ICA and epochs of EEG derivatives are not settled), and
 # the report.
 IGNORED = (
-    "*.fif", "*_eeg.json", "*_ica.json", "*_trials.*", "*_gains.*", "*_verdicts.*",
+    "*.fif", "*_eeg.json", "*_ica.*", "*_trials.*", "*_gains.*", "*_verdicts.*", "*_frequencies.*",
     "*_coefficients.*", "*_psd.*", "*_measures.*", "*_windows.*", "study", "report.*",
     "manifest.*",
 )  # fmt: skip

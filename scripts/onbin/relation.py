@@ -122,8 +122,8 @@ def window_relation(
     Notes
     -----
     Windows of one trial are alike, so trials are permuted, not windows: the responses of a trial go
-    with the alpha of another one of the same condition and number of windows. A drift that alpha and
-    response share over the recording makes rho and its p large: partial_rho tells.
+    with the alpha of another one of the same condition and number of windows. A drift that alpha
+    and response share over the recording makes rho and its p large: partial_rho tells.
     """
     _check_lengths(
         log_alpha=log_alpha,
