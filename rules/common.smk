@@ -14,7 +14,8 @@ from onbin.errors import OnbinError
 from onbin.fingerprint import fingerprint
 from onbin.settings import load_settings, part
 
-os.environ.setdefault("OMP_NUM_THREADS", "1")  # jobs run side by side; results do not depend on it
+# Jobs run side by side, so each takes one thread; it also keeps sums in one order.
+os.environ.setdefault("OMP_NUM_THREADS", "1")
 STARTED_S = time.time()
 
 try:
@@ -66,14 +67,24 @@ def of_all_recordings(name):
 
 
 def of_all_participants(name):
-    return [result(name).format(participant=participant) for participant in PARTICIPANTS]
+    return [
+        result(name).format(participant=participant) for participant in PARTICIPANTS
+    ]
 
 
 def everything():
     """Every file of the results but the manifest."""
     return [
-        *(path for name in layout.names("recording") for path in of_all_recordings(name)),
-        *(path for name in layout.names("participant") for path in of_all_participants(name)),
+        *(
+            path
+            for name in layout.names("recording")
+            for path in of_all_recordings(name)
+        ),
+        *(
+            path
+            for name in layout.names("participant")
+            for path in of_all_participants(name)
+        ),
         *(result(name) for name in layout.names("study")),
     ]
 

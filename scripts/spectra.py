@@ -46,17 +46,22 @@ def measure_spectra(inputs, outputs, settings):
         windows += [row | {"recording": recording} for row in kept]
         sites_uv = sites.averaging(places, channels) @ dataset.eeg_uv(raw)
         n_channels = sum(site.kind == "channel" for site in places)
-        coefficients.append(
-            spectra.bin_coefficients(
+        shape = (len(kept), len(places), len(terms), len(bins))
+        of_recording = np.empty(shape, dtype=np.complex64)
+        for condition in {row["condition"] for row in kept}:
+            chosen = [i for i, row in enumerate(kept) if row["condition"] == condition]
+            driven = settings["conditions"][condition]["flickering"]
+            of_recording[chosen] = spectra.bin_coefficients(
                 sites_uv,
-                np.array([row["start_sample"] for row in kept], dtype=int),
-                np.array([row["offset_s"] for row in kept], dtype=float),
+                np.array([kept[i]["start_sample"] for i in chosen], dtype=int),
+                np.array([kept[i]["offset_s"] for i in chosen], dtype=float),
                 float(rate),
                 np.array([float(term.frequency) for term in here]),
                 np.array(samples, dtype=int),
                 np.array(bins),
+                [float(term.frequency) for term in here if term.driven_by(driven)],
             )
-        )
+        coefficients.append(of_recording)
         for row in kept:
             driven = settings["conditions"][row["condition"]]["flickering"]
             stretch = slice(row["start_sample"], row["start_sample"] + row["n_samples"])
@@ -76,7 +81,7 @@ def measure_spectra(inputs, outputs, settings):
     )
     arrays.write(
         outputs.coefficients,
-        coefficients_uv=np.concatenate(coefficients).astype(np.complex64),
+        coefficients_uv=np.concatenate(coefficients),
         bins=bins,
         samples=samples,
         rate=str(rate),

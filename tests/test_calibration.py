@@ -5,23 +5,25 @@ neighbouring bins on each side beyond 1. Noise is Gaussian, white, or with power
 1/f^exponent above the demo's high-pass of 0.5 Hz. Seeds are fixed; of about 40 rates held to a 99 %
 interval one may well lie outside by chance with another seed, and the long runs leave less room.
 
-What sloping noise does: false positives at a level of 5 %, 10 000 simulations.
+What sloping noise does: false positives at a level of 5 %, 3 000 to 10 000
+simulations.
 
 - T²circ, Hotelling and Rayleigh do not use the neighbours. They keep their level in white and 1/f
   noise. In 1/f² noise they are at 4.1 to 4.8 %, since what leaks into windows that touch is
   opposite; the same leakage makes scatter less circular: the condition index is at 6 to 7 %.
 - The F test takes the neighbours' mean for the noise at the term. Where the spectrum is curved
-  that mean is too large and the test too careful. At 2 Hz it is too ready: bins below the term
-  would lie at zero and are missing. `expected_rate` is the closed form that these rates follow.
+  that mean is too large and the test too careful; that neighbours go in mirrored pairs keeps it
+  from being too ready where bins below the term are missing. `expected_rate` is the closed form
+  that these rates follow.
 - The F test of total power, for flicker without a fixed phase, is sharper and feels this more.
 
 ====================  =====  =====  =====  =======
 noise, test           2 Hz   6 Hz   10 Hz  14.4 Hz
 ====================  =====  =====  =====  =======
-1/f, evoked F          12 %  2.0 %  3.8 %    4.6 %
-1/f², evoked F         11 %  0.3 %  2.4 %    3.7 %
-1/f, total power F     52 %  0.0 %  1.4 %    3.2 %
-1/f², total power F    14 %  0.0 %  0.1 %    1.0 %
+1/f, evoked F         3.0 %  1.9 %  3.5 %    4.4 %
+1/f², evoked F        1.2 %  0.1 %  1.8 %    3.7 %
+1/f, total power F    0.1 %  0.0 %  1.5 %    3.0 %
+1/f², total power F   0.0 %  0.0 %  0.1 %    0.8 %
 ====================  =====  =====  =====  =======
 """
 
@@ -162,7 +164,7 @@ def test_f_test_at_the_tag_is_near_its_level():
     assert 0.035 < expected_rate(TAG, 2, 0.05) < 0.05
     assert 0.045 < expected_rate(Fraction(18), 1, 0.05) < 0.05
     assert expected_rate(THETA, 1, 0.05) < 0.025
-    assert expected_rate(LOW, 1, 0.05) > 0.1
+    assert 0.025 < expected_rate(LOW, 1, 0.05) < 0.05
 
 
 def test_total_power_keeps_its_level_in_white_noise_and_is_careful_in_sloping_noise():
@@ -276,6 +278,7 @@ def recovered(tags, rate_hz, amplitude_uv, only=None, noise_uv=0.0, n_sites=1):
         np.array([float(term.frequency) for term in known]),
         np.array([samples[term] for term in known]),
         BINS,
+        [float(term.frequency) for term in known],
     )
     measured = []
     for index, (term, z) in enumerate(known.items()):
@@ -312,21 +315,10 @@ def test_a_term_in_noise_is_recovered_without_bias(amplitude_uv, tags, rate_hz):
     assert measured["projected_amplitude_uv"].mean() == pytest.approx(amplitude_uv, rel=5e-3)
 
 
-@pytest.mark.parametrize("amplitude_uv", [0.05, 20.0])
-@pytest.mark.parametrize("rate_hz", [256.0, 300.0, 512.0])
-def test_many_terms_in_windows_of_whole_cycles(rate_hz, amplitude_uv):
-    for term, z, measured in recovered(SHOWN, rate_hz, amplitude_uv):
-        error = abs(mean_coefficient(measured) - z)
-        # other sinusoids have a slope in the window, which is fitted with each: 0.2 % of them
-        assert error < 2.5e-3 * amplitude_uv, term
-        if term.harmonic:
-            assert measured["amplitude_uv"][0] == pytest.approx(abs(z), rel=5e-3), term
-
-
+@pytest.mark.parametrize("amplitude_uv", [0.05, 1.0, 20.0])
 @pytest.mark.parametrize("rate_hz", RATES_HZ)
-@pytest.mark.parametrize(("tags", "share"), [(SHOWN, 0.06), (OFF_BIN, 0.03)], ids=["shown", "off"])
-def test_many_terms_in_windows_that_break_cycles_leak_into_each_other(tags, share, rate_hz):
-    # each term is fitted alone: where no window holds whole cycles of all tags, up to 6 % of the
-    # strongest term's amplitude is found at another
-    for term, z, measured in recovered(tags, rate_hz, 1.0):
-        assert abs(mean_coefficient(measured) - z) < share, term
+@pytest.mark.parametrize("tags", [SHOWN, OFF_BIN], ids=["shown", "off_bin"])
+def test_many_terms_do_not_leak_into_each_other(tags, rate_hz, amplitude_uv):
+    for term, z, measured in recovered(tags, rate_hz, amplitude_uv):
+        # all are fitted together, so windows need not hold whole cycles of each
+        assert mean_coefficient(measured) == pytest.approx(z, rel=1e-7), term

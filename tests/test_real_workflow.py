@@ -18,8 +18,8 @@ LED_SETTINGS = {
     "regions": {"occipital": ["O1", "Oz", "O2"]},
     # 16 channels, none below the ears: their average holds a good part of the response itself
     "sensors": {"reference": "as_recorded"},
-    # whole seconds hold whole cycles of all four; 29 s after the onset's transient: 9 windows of 3 s
-    "windows": {"length_s": 3.0, "skip_s": 1.0, "peak_to_peak_uv": [300.0, 800.0]},
+    # whole seconds hold whole cycles of all four: 10 windows of 3 s
+    "windows": {"length_s": 3.0, "skip_s": 0.0, "peak_to_peak_uv": [300.0, 800.0]},
     "response": {"harmonics": 2, "intermodulation_order": 1},
     "alpha": {"region": "occipital"},
     "relation": {"response_region": "occipital"},
@@ -32,7 +32,8 @@ EYES_SETTINGS = {
         "eyes_closed": {"events": {"trial_type": "eyes_closed"}},
     },
     "regions": {"occipital": ["O1", "Oz", "O2"]},
-    "windows": {"length_s": 4.0, "skip_s": 0.0},
+    # this person's alpha with closed eyes is up to 0.5 mV from peak to peak
+    "windows": {"length_s": 4.0, "skip_s": 0.0, "peak_to_peak_uv": [150.0, 800.0]},
     "alpha": {"region": "occipital", "frequency_from": ["eyes_closed"]},
     "relation": {"response_region": "occipital"},
     "comparisons": {

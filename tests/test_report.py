@@ -96,8 +96,9 @@ class Study:
         self.inputs = SimpleNamespace(
             coefficients=[], psd=[], relation_windows=[], responses=[], alphas=[], relations=[],
             people=[], flicker=[], channels=[], gains=[], sensors=[], components=[], windows=[],
-            cleaning=[], attentions=[],
+            cleaning=[], attentions=[], plan_page=str(folder / "flicker_plan.txt"),
         )  # fmt: skip
+        (folder / "flicker_plan.txt").write_text("The plan can work as it stands.\n")
         for number, who in enumerate(self.names):
             present = [name for name in settings.conditions if (lacking or {}).get(number) != name]
             self._recording(who, present, number in bad)
@@ -463,8 +464,9 @@ def test_flicker_table_is_exact(usual):
     # 144 Hz, 8 and 10 frames; 2.5 s at 250 Hz holds 45 and 36 cycles (common practice)
     assert [str(rows["left 1f"][k]) for k in ("cycles", "bin_hz")] == ["36", "2/5"]
     assert rows["right 1f"]["cycles"] == 45
-    # 14.4 Hz, the other tag, is 9 bins below 18 Hz
-    assert rows["right 1f"]["left_out"][0]["frequencies"] == [rows["left 1f"]["term"].frequency]
+    # 14.4 Hz, the other tag, is 9 bins below 18 Hz; with it goes the bin opposite, 21.6 Hz
+    own, other = (rows[f"{tag} 1f"]["term"].frequency for tag in ("right", "left"))
+    assert rows["right 1f"]["left_out"][0]["frequencies"] == [other, 2 * own - other]
     assert "72/5 = 14.4" in Page(usual[1]).words
 
 
@@ -514,15 +516,16 @@ def test_same_in_same_out(usual):
 )
 def test_caution_by_flashes_a_second(rate_hz, risk):
     tag = tagging.exact(rate_hz)
-    light, _ = report_tables.cautions({"lamp": tag})
-    _, pattern = report_tables.cautions({"lamp": tag / 2})  # two reversals a cycle
+    flashing, reversing = ({"lamp": {"pattern_reversal": it}} for it in (False, True))
+    (light,) = report_tables.cautions({"lamp": tag}, flashing)
+    (pattern,) = report_tables.cautions({"lamp": tag / 2}, reversing)  # two reversals a cycle
     assert light["risk"] == pattern["risk"] == risk
 
 
 def test_cautions_on_the_page(usual):
     words = Page(usual[1]).words
     assert "right: 18 flashes a second. This lies in 15–25 a second" in words
-    assert "left if it reverses a pattern: 28.8 reversals a second. This lies in 3–60" in words
+    assert "left: 14.4 flashes a second. This lies in 3–60" in words
     assert "not a diagnosis" in words
     assert "personal health data" in words
     assert "ethics board" in words

@@ -91,16 +91,19 @@ def test_study_terms_stop_at_the_passband():
 
 
 def test_neighbours_leave_out_bins_that_hold_a_term():
-    # bins of 0.4 Hz beside 14.4 Hz: 18 Hz is 9 bins above, 15 Hz lies between bins 1 and 2
+    # bins of 0.4 Hz beside 14.4 Hz: 18 Hz is 9 bins above, 15 Hz lies between bins 1 and 2, and
+    # 18.4 Hz is beyond the filter
+    offsets = [-10, -9, -3, -2, 2, 3, 9, 10]
     usable = tagging.usable_neighbours(
-        Fraction(72, 5), [-2, 1, 2, 8, 9, 10], Fraction(5, 2), [Fraction(18), Fraction(15)], 18.2
+        Fraction(72, 5), offsets, Fraction(5, 2), [Fraction(18), Fraction(15)], 18.2
     )
-    assert usable == [True, False, False, True, False, False]  # 18.4 Hz is beyond the filter
+    assert [j for j, use in zip(offsets, usable, strict=True) if use] == [-3, 3]
 
 
 def test_neighbours_stay_above_zero_frequency():
-    usable = tagging.usable_neighbours(Fraction(2), [-4, -3, -2], Fraction(2), [], 90.0)
-    assert usable == [False, False, True]
+    offsets = [-4, -3, -2, 2, 3, 4]
+    usable = tagging.usable_neighbours(Fraction(2), offsets, Fraction(2), [], 90.0)
+    assert usable == [False, False, True, True, False, False]  # in mirrored pairs
 
 
 @pytest.mark.parametrize("rate", [Fraction(1000, 3), Fraction(512), Fraction(256), Fraction(200)])

@@ -522,6 +522,18 @@ def _sampled_sines(settings: Mapping, tags: Mapping[str, Fraction]) -> Iterator[
                 yield Term(name, f"refresh less {h}f", ((name, h),), image)
 
 
+def _in_the_way(
+    place: Fraction, duration_s: Fraction, others: Sequence[Term], end_hz: float
+) -> str | None:
+    """Why a bin holds more than noise; None where it does not."""
+    if not 1 / duration_s < place <= end_hz:
+        return OUTSIDE
+    nearest = min(others, key=lambda o: abs(o.frequency - place), default=None)
+    if nearest and abs(nearest.frequency - place) * duration_s < 1:
+        return label(nearest)
+    return None
+
+
 def _beside(
     term: Term,
     bins: Mapping[int, Fraction],
@@ -538,11 +550,9 @@ def _beside(
     reasons: dict[str, list[int]] = defaultdict(list)
     for (offset, place), is_usable in zip(bins.items(), usable, strict=True):
         if not is_usable:
-            inside = 1 / duration_s < place <= end_hz
-            why = OUTSIDE
-            if inside:
-                why = label(min(others, key=lambda o: abs(o.frequency - place)))
-            reasons[why].append(offset)
+            near = _in_the_way(place, duration_s, others, end_hz)
+            why = near or _in_the_way(bins[-offset], duration_s, others, end_hz)
+            reasons[why if near else f"mirror of {why}"].append(offset)
     return sum(usable), tuple((why, tuple(found)) for why, found in reasons.items())
 
 

@@ -290,10 +290,11 @@ RISKS = {
 }
 
 
-def _risk(rate: Fraction) -> str:
-    for risk, (low, high) in (("most", MOST_PROVOCATIVE_HZ), ("provocative", PROVOCATIVE_HZ)):
+def risk(rate: Fraction) -> str:
+    """``most`` from 15 to 25 a second, ``provocative`` from 3 to 60, else ``outside``."""
+    for word, (low, high) in (("most", MOST_PROVOCATIVE_HZ), ("provocative", PROVOCATIVE_HZ)):
         if low <= rate <= high:
-            return risk
+            return word
     return "outside"
 
 
@@ -307,8 +308,8 @@ def safety(settings: Mapping, recorded: Sequence[Recorded]) -> list[str]:
         reversing = settings["tags"][name]["pattern_reversal"]
         rate = 2 * frequency if reversing else frequency
         unit = "reversals" if reversing else "flashes"
-        told[_risk(rate)].append(f"{name} ({float(rate):.4g} {unit} a second)")
-    lines = [RISKS[risk].format(_listed(told[risk])) for risk in RISKS if risk in told]
+        told[risk(rate)].append(f"{name} ({float(rate):.4g} {unit} a second)")
+    lines = [RISKS[word].format(_listed(told[word])) for word in RISKS if word in told]
     if not lines:
         return []
     display = settings["display"]

@@ -12,6 +12,7 @@ import numpy as np
 
 from onbin import arrays, figures, flicker, inference, layout, response_tables, tables, tagging
 from onbin.flicker_tables import AS_SET
+from onbin.plan_page import risk
 from onbin.response_tables import SUM
 
 Rows = Sequence[Mapping[str, Any]]
@@ -21,7 +22,6 @@ FUNDAMENTAL = "1f"
 ATTENTION_LEVEL = 0.05  # of telling the attended tag of one person
 # Changes of light a second that can provoke seizures, and those to which photosensitive people
 # respond most (common practice; the lower end as in WCAG 2.2, 2.3.1, and Harding et al. 2005).
-PROVOCATIVE_HZ, MOST_PROVOCATIVE_HZ = (3, 60), (15, 25)
 
 
 @dataclass(frozen=True)
@@ -98,6 +98,8 @@ class Material:
         Tables of each recording, by its name and by `KINDS`.
     plans : mapping
         `Plan` by participant.
+    plan_page : str
+        The flicker plan as it was printed before the run.
     amplitudes_uv : mapping
         By participant and condition, at the region of the response: shape (n_terms, n_bins).
     spectra : list of figures.Spectrum
@@ -118,6 +120,7 @@ class Material:
     relation_windows: Rows
     recordings: Mapping[str, Mapping[str, Rows]]
     plans: Mapping[str, Plan]
+    plan_page: str
     amplitudes_uv: Mapping[str, Mapping[str, np.ndarray]]
     spectra: Sequence[figures.Spectrum]
     info: Any
@@ -171,6 +174,7 @@ def read(inputs: SimpleNamespace, settings: Mapping[str, Any]) -> Material:
         relation_windows=[r for path in inputs.relation_windows for r in tables.read_table(path)],
         recordings=recordings,
         plans=plans,
+        plan_page=Path(inputs.plan_page).read_text(encoding="utf-8"),
         amplitudes_uv=amplitudes_uv,
         spectra=sorted(spectra, key=lambda s: list(settings["conditions"]).index(s.condition)),
         info=mne.io.read_info(inputs.signal, verbose="error"),
@@ -208,24 +212,19 @@ def _spectra(
 # --- the flicker ---------------------------------------------------------------------------------
 
 
-def cautions(tags: Mapping[str, Fraction]) -> list[dict[str, Any]]:
-    """How often each tag changes in a second, as a light and as a reversing pattern.
+def cautions(
+    tags: Mapping[str, Fraction], settings_of: Mapping[str, Mapping[str, Any]]
+) -> list[dict[str, Any]]:
+    """How often each tag changes in a second: flashes, or reversals of a pattern.
 
-    ``risk`` is ``most`` from 15 to 25 a second, ``provocative`` from 3 to 60, else ``outside``: a
-    word for a caution, never a clearance.
+    ``risk`` is a word for a caution, never a clearance, see `plan_page.risk`.
     """
-    return [
-        {"tag": tag, "kind": kind, "rate": rate, "risk": _risk(rate)}
-        for tag, frequency in tags.items()
-        for kind, rate in (("light", frequency), ("pattern reversal", 2 * frequency))
-    ]
-
-
-def _risk(rate: Fraction) -> str:
-    for name, (low, high) in (("most", MOST_PROVOCATIVE_HZ), ("provocative", PROVOCATIVE_HZ)):
-        if low <= rate <= high:
-            return name
-    return "outside"
+    rows = []
+    for tag, frequency in tags.items():
+        reversing = settings_of[tag]["pattern_reversal"]
+        rate = 2 * frequency if reversing else frequency
+        rows.append({"tag": tag, "reversing": reversing, "rate": rate, "risk": risk(rate)})
+    return rows
 
 
 def flicker_plans(material: Material) -> list[dict[str, Any]]:

@@ -3,24 +3,31 @@
 Units: signals in µV, frequencies in Hz, coefficients in µV (amplitude, not root mean square).
 """
 
+from collections.abc import Sequence
+
 import numpy as np
 
 TREND_TERMS = 2  # mean and linear trend, fitted together with each sinusoid
 
 
-def projector(n_samples: int, rate_hz: float, frequencies_hz: np.ndarray) -> np.ndarray:
+def projector(
+    n_samples: int, rate_hz: float, frequencies_hz: np.ndarray, present_hz: Sequence[float] = ()
+) -> np.ndarray:
     """Operator whose product with a window is the coefficient at each frequency.
 
-    Each coefficient is the least-squares fit of one sinusoid together with a mean and a linear
-    trend: X = (2/N) Σ x[n]·exp(−i2πfn/fs) where the window holds whole cycles and no trend, and
-    without bias at any other frequency or length. For A·cos(2πft + φ), |X| = A and arg X = φ. With
-    white noise of variance σ², E|X|² = 4σ²/N.
+    Each coefficient is the least-squares fit of one sinusoid together with a mean, a linear trend
+    and the other sinusoids that are known to be present: X = (2/N) Σ x[n]·exp(−i2πfn/fs) where the
+    window holds whole cycles of all and no trend, and without bias at any frequency or length. For
+    A·cos(2πft + φ), |X| = A and arg X = φ. With white noise of variance σ², E|X|² = 4σ²/N.
 
     Parameters
     ----------
     n_samples : int
     rate_hz : float
     frequencies_hz : ndarray, shape (n_frequencies,)
+    present_hz : sequence of float
+        Other sinusoids, fitted along so that they do not leak in; those nearer than half a bin to
+        the frequency itself cannot be told from it and are left out.
 
     Returns
     -------
@@ -28,20 +35,36 @@ def projector(n_samples: int, rate_hz: float, frequencies_hz: np.ndarray) -> np.
 
     Notes
     -----
-    The sinusoid's regressors are made orthogonal to the trend first (Frisch & Waugh 1933, from
+    Each sinusoid's regressors are made orthogonal to all else first (Frisch & Waugh 1933, from
     memory), so one 2 × 2 system is left for each frequency.
     """
     n = np.arange(n_samples)
-    trend, _ = np.linalg.qr(np.vander(n - n.mean(), TREND_TERMS, increasing=True).astype(float))
-    phase = 2 * np.pi * np.outer(np.asarray(frequencies_hz, dtype=float), n) / rate_hz
-    regressors = np.stack([np.cos(phase), -np.sin(phase)], axis=1)
-    regressors -= (regressors @ trend) @ trend.T
-    gram = regressors @ regressors.transpose(0, 2, 1)
-    fitted = np.linalg.solve(gram, regressors)
-    return fitted[:, 0] + 1j * fitted[:, 1]
+    trend = np.vander(n - n.mean(), TREND_TERMS, increasing=True).astype(float)
+    present_hz = np.asarray(present_hz, dtype=float)
+    operator = np.empty((len(frequencies_hz), n_samples), dtype=complex)
+    bases: dict[bytes, np.ndarray] = {}
+    for row, frequency_hz in enumerate(frequencies_hz):
+        others = np.abs(present_hz - frequency_hz) * n_samples / rate_hz > 0.5
+        if others.tobytes() not in bases:
+            phase = 2 * np.pi * np.outer(n, present_hz[others]) / rate_hz
+            bases[others.tobytes()], _ = np.linalg.qr(
+                np.hstack([trend, np.cos(phase), np.sin(phase)])
+            )
+        known = bases[others.tobytes()]
+        phase = 2 * np.pi * frequency_hz * n / rate_hz
+        regressors = np.stack([np.cos(phase), -np.sin(phase)])
+        regressors -= (regressors @ known) @ known.T
+        fitted = np.linalg.solve(regressors @ regressors.T, regressors)
+        operator[row] = fitted[0] + 1j * fitted[1]
+    return operator
 
 
-def project(windows_uv: np.ndarray, rate_hz: float, frequencies_hz: np.ndarray) -> np.ndarray:
+def project(
+    windows_uv: np.ndarray,
+    rate_hz: float,
+    frequencies_hz: np.ndarray,
+    present_hz: Sequence[float] = (),
+) -> np.ndarray:
     """Complex coefficient of each window at each frequency, exactly.
 
     Parameters
@@ -49,6 +72,8 @@ def project(windows_uv: np.ndarray, rate_hz: float, frequencies_hz: np.ndarray) 
     windows_uv : ndarray, shape (..., n_samples)
     rate_hz : float
     frequencies_hz : array_like, shape (n_frequencies,)
+    present_hz : sequence of float
+        Other sinusoids that are present, see `projector`.
 
     Returns
     -------
@@ -62,7 +87,7 @@ def project(windows_uv: np.ndarray, rate_hz: float, frequencies_hz: np.ndarray) 
     array([3.])
     """
     windows_uv = np.asarray(windows_uv, dtype=float)
-    operator = projector(windows_uv.shape[-1], rate_hz, np.atleast_1d(frequencies_hz))
+    operator = projector(windows_uv.shape[-1], rate_hz, np.atleast_1d(frequencies_hz), present_hz)
     return windows_uv @ operator.real.T + 1j * (windows_uv @ operator.imag.T)
 
 
@@ -167,6 +192,7 @@ def bin_coefficients(
     frequencies_hz: np.ndarray,
     samples: np.ndarray,
     bins: np.ndarray,
+    present_hz: Sequence[float] = (),
 ) -> np.ndarray:
     """Coefficients at each term and at bins beside it, referred to the onset of the flicker.
 
@@ -183,6 +209,8 @@ def bin_coefficients(
         Length of the window of each term; a bin is rate_hz / samples wide.
     bins : ndarray of int, shape (n_bins,)
         Offsets from the term, in bins; 0 is the term.
+    present_hz : sequence of float
+        The terms that flicker in these windows, fitted together.
 
     Returns
     -------
@@ -199,6 +227,6 @@ def bin_coefficients(
         for term in np.flatnonzero(samples == n_samples):
             bins_hz = frequencies_hz[term] + bins * width_hz
             there = (bins_hz > 0.99 * width_hz) & (bins_hz < rate_hz / 2 - 0.99 * width_hz)
-            projected = project(windows_uv, rate_hz, bins_hz[there])
+            projected = project(windows_uv, rate_hz, bins_hz[there], present_hz)
             coefficients_uv[:, :, term, there] = to_onset(projected, bins_hz[there], offsets_s)
     return coefficients_uv

@@ -217,7 +217,8 @@ def usable_neighbours(
     """Tell which neighbouring bins hold noise only, and noise that the filters left as it was.
 
     A bin is left out when an occupied frequency is closer to it than one bin, when it lies within
-    a bin of zero frequency, or beyond what the filters pass.
+    a bin of zero frequency, or beyond what the filters pass; and with it its mirror image on the
+    other side, since on a falling spectrum one side alone would mistake the slope for noise.
 
     Parameters
     ----------
@@ -232,9 +233,12 @@ def usable_neighbours(
     below_hz : float
         End of the pass band.
     """
-    others = [f for f in occupied if f != frequency]
+    offsets, others = list(offsets), [f for f in occupied if f != frequency]
     bins = [frequency + Fraction(j) / duration_s for j in offsets]
-    return [
-        1 / duration_s < b <= below_hz and all(abs(b - other) * duration_s >= 1 for other in others)
-        for b in bins
-    ]
+    free = {
+        j
+        for j, b in zip(offsets, bins, strict=True)
+        if 1 / duration_s < b <= below_hz
+        and all(abs(b - other) * duration_s >= 1 for other in others)
+    }
+    return [j in free and -j in free for j in offsets]

@@ -111,6 +111,7 @@ def survival_rows(
         if not chosen:
             continue
         frequency_hz = float(term.frequency)
+        shown = flickering[chosen[0].condition]
         coefficients = spectra.bin_coefficients(
             signal_uv,
             np.array([window.start_sample for window in chosen]),
@@ -119,6 +120,7 @@ def survival_rows(
             np.array([frequency_hz]),
             np.array([samples[term]]),
             np.array([0]),
+            [float(other.frequency) for other in terms if other.driven_by(shown)],
         )
         topography = coefficients[:, :, 0, 0].mean(axis=0)
         open_share = np.mean(
