@@ -12,7 +12,8 @@ MEASURES = [
     "hotelling_t2", "hotelling_p", "condition_index", "condition_index_p", "detection_test",
     "detection_p", "detection_p_corrected", "present", "disc_radius_uv", "phase_rad",
     "phase_half_width_rad", "itpc", "ppc", "rayleigh_z", "rayleigh_p", "harmonics",
-    "amplitude_sum_uv",
+    "amplitude_sum_uv", "latency_ms",
+    "latency_low_ms", "latency_high_ms",
 ]  # fmt: skip
 WINDOWS = [
     "participant", "recording", "window", "window_number", "trial", "condition", "tag", "term",

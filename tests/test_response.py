@@ -237,3 +237,31 @@ def test_power_of_t2circ_follows_the_noncentral_f(amplitude_uv):
     threshold = stats.f.isf(0.05, 2, 2 * K - 2)
     expected = stats.ncf.sf(threshold, 2, 2 * K - 2, K * amplitude_uv**2)
     assert power == pytest.approx(expected, abs=0.02)
+
+
+def test_apparent_latency_is_the_slope_of_phase():
+    # a delay of 41 ms on four harmonics of 15 Hz, whose cycle is 66.7 ms
+    frequencies_hz = np.array([15.0, 30.0, 45.0, 60.0])
+    phase = np.angle(np.exp(1j * (0.6 - 2 * np.pi * frequencies_hz * 0.041)))[:, None]
+    half = np.full((4, 1), 0.1)
+    latency_s, half_s = response.apparent_latency(phase, half, frequencies_hz)
+    assert latency_s[0] == pytest.approx(0.041, rel=1e-9)
+    # least squares: 0.1 rad over sqrt(Σ(f − mean)²) Hz and 2π
+    assert half_s[0] == pytest.approx(0.1 / np.sqrt(1125) / (2 * np.pi), rel=1e-9)
+
+
+def test_apparent_latency_needs_two_phases():
+    phase, half = np.zeros((3, 1)), np.array([[0.1], [np.pi], [np.pi]])
+    latency_s, half_s = response.apparent_latency(phase, half, np.array([10.0, 20.0, 30.0]))
+    assert np.isnan(latency_s[0])
+    assert np.isnan(half_s[0])
+
+
+def test_intervals_of_apparent_latency_cover():
+    rng = np.random.default_rng(16)
+    frequencies_hz = np.array([12.0, 24.0, 36.0])
+    true = 2 * np.exp(1j * (0.3 - 2 * np.pi * frequencies_hz * 0.05))
+    measured = [response.phase_interval(z + noise(rng, 20, 4_000)) for z in true]
+    phase, half = (np.stack(values) for values in zip(*measured, strict=True))
+    latency_s, half_s = response.apparent_latency(phase, half, frequencies_hz)
+    assert np.mean(abs(latency_s - 0.05) <= half_s) >= 0.95  # phases' discs are conservative

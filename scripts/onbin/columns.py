@@ -257,6 +257,14 @@ COLUMNS = {
     "phase_half_width_rad": Column(
         "Half-width of the 95 % interval of the phase; π where no phase is excluded.", "rad"
     ),
+    "latency_ms": Column(
+        "Apparent latency: minus the slope of phase over the harmonics named, over 2π; known up to "
+        "multiples of the tag's cycle. It takes the harmonics to be made alike.",
+        "ms",
+        source="Regan 1966, Electroencephalogr Clin Neurophysiol 20:238",
+    ),
+    "latency_low_ms": Column("Lower end of its 95 % interval.", "ms"),
+    "latency_high_ms": Column("Upper end of that interval.", "ms"),
     "itpc": Column("Inter-trial phase coherence over windows.", null="E[ITPC²] = 1/K"),
     "ppc": Column("Pairwise phase consistency (K·ITPC² − 1)/(K − 1).", null="mean 0"),
     "rayleigh_z": Column("Rayleigh's z = K·ITPC².", source="Zar 2010, chapter 27"),

@@ -26,6 +26,7 @@ MEASURES = {
     "alpha_lateralisation": "alpha lateralisation",
 }
 STUDY_FILES = {
+    "plan_page": "the flicker plan",
     "study_participants": "who is in the study, who is set aside, and why",
     "study_flicker": "where the EEG shows each tag's flicker",
     "study_responses": "responses: person, condition, tag, term, channel or region",

@@ -185,6 +185,50 @@ def phase_interval(
     return np.angle(mean), np.where(inside, np.pi, half)
 
 
+def apparent_latency(
+    phase_rad: np.ndarray, half_width_rad: np.ndarray, frequencies_hz: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """Delay that the slope of phase over harmonics speaks of, and the half-width of its interval.
+
+    τ = −dφ/(2π df) by weighted least squares, each phase taken to lag the one of the next lower
+    harmonic by less than a turn: the delay is known up to multiples of the tag's cycle.
+
+    Parameters
+    ----------
+    phase_rad, half_width_rad : ndarray, shape (n_harmonics, ...)
+        From `phase_interval`.
+    frequencies_hz : ndarray, shape (n_harmonics,)
+        Rising.
+
+    Returns
+    -------
+    latency_s, half_width_s : ndarray, shape (...)
+        NaN where fewer than two phases are known to a quarter turn.
+
+    Notes
+    -----
+    Regan 1966, Electroencephalogr Clin Neurophysiol 20:238 (from memory). It takes the harmonics
+    to be made alike, which they need not be.
+    """
+    known = half_width_rad < np.pi / 2
+    weight = np.where(known, 1 / np.maximum(half_width_rad, np.finfo(float).eps) ** 2, 0)
+    turned = np.zeros_like(phase_rad)
+    turned[0] = phase_rad[0]
+    for index in range(1, len(phase_rad)):
+        lag = np.mod(phase_rad[index - 1] - phase_rad[index], 2 * np.pi)
+        turned[index] = turned[index - 1] - lag
+    frequency = np.asarray(frequencies_hz, dtype=float).reshape(-1, *(1,) * (phase_rad.ndim - 1))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        total = weight.sum(axis=0)
+        apart = frequency - (weight * frequency).sum(axis=0) / total
+        spread = (weight * apart**2).sum(axis=0)
+        slope = (weight * apart * turned).sum(axis=0) / spread
+        enough = known.sum(axis=0) >= 2
+        latency_s = np.where(enough, -slope / (2 * np.pi), np.nan)
+        half_s = np.where(enough, 1 / np.sqrt(spread) / (2 * np.pi), np.nan)
+    return latency_s, half_s
+
+
 @dataclass(frozen=True)
 class PhaseLocking:
     """How alike the phases of windows are: resultant length, its unbiased square, Rayleigh test."""

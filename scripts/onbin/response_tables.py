@@ -173,7 +173,18 @@ def response_rows(
                     "windows": n_windows,
                     "harmonics": " ".join(term.term for term, _ in own),
                 }
-                yield from _rows(coefficients, common, {"amplitude_sum_uv": total})
+                latency_s, half_s = response.apparent_latency(
+                    np.stack([measured["phase_rad"] for _, measured in own]),
+                    np.stack([measured["phase_half_width_rad"] for _, measured in own]),
+                    np.array([float(term.frequency) for term, _ in own]),
+                )
+                values = {
+                    "amplitude_sum_uv": total,
+                    "latency_ms": latency_s * 1e3,
+                    "latency_low_ms": (latency_s - half_s) * 1e3,
+                    "latency_high_ms": (latency_s + half_s) * 1e3,
+                }
+                yield from _rows(coefficients, common, values)
 
 
 def _is_shared(term: Term, terms: Sequence[Term], flickering: Sequence[str]) -> bool:
