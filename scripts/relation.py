@@ -4,11 +4,11 @@ from onbin import relation_tables, tables
 from onbin.runner import run
 
 WINDOWS = [
-    "participant", "recording", "window", "window_number", "trial", "condition", "tag", "attended",
-    "log_alpha", "projected_amplitude_uv",
+    "participant", "recording", "window", "window_number", "trial", "condition", "tag",
+    "frequency_source", "attended", "log_alpha", "projected_amplitude_uv",
 ]  # fmt: skip
 MEASURES = [
-    "participant", "tag", "windows", "rho", "rho_partial", "rho_p", "reason",
+    "participant", "tag", "frequency_source", "windows", "rho", "rho_partial", "rho_p", "reason",
 ]  # fmt: skip
 
 

@@ -17,7 +17,7 @@ MEASURES = [
 ]  # fmt: skip
 WINDOWS = [
     "participant", "recording", "window", "window_number", "trial", "condition", "tag", "term",
-    "site", "projected_amplitude_uv",
+    "frequency_source", "site", "projected_amplitude_uv",
 ]  # fmt: skip
 
 

@@ -8,10 +8,12 @@ from onbin.runner import run
 PARTICIPANTS = [
     "participant", "in_study", "reason", "recordings", "channels_total", "channels_bad",
     "components_removed", "windows_placed", "windows_kept", "fewest_windows", "fewest_condition",
+    "measured_tags",
 ]  # fmt: skip
 COMPARISONS = [
     "comparison", "measure", "site", "plus", "minus", "kind", "n", "estimate", "estimate_unit",
     "estimate_low", "estimate_high", "effect_size", "p", "p_holm", "who",
+    "measured_in",
 ]  # fmt: skip
 GROUP = ["tag", "n", "windows", "rho_mean", "rho_low", "rho_high", "p", "rm_r", "rm_p"]
 
@@ -44,6 +46,7 @@ def make_study(inputs, outputs, settings):
         for recording, path in zip(settings["recordings"], inputs.flicker, strict=True)
         for row in tables.read_table(path)
     ]
+    measured = study_tables.measured_tags(flicker, settings["participants"])
     in_study = [row["participant"] for row in participants if row["in_study"]]
     responses, alphas, relations, attentions, windows = (
         [row for path in paths for row in tables.read_table(path)]
@@ -56,7 +59,11 @@ def make_study(inputs, outputs, settings):
         )
     )
 
-    tables.write_table(outputs.participants, participants, PARTICIPANTS)
+    tables.write_table(
+        outputs.participants,
+        (row | {"measured_tags": ", ".join(measured[row["participant"]])} for row in participants),
+        PARTICIPANTS,
+    )
     columns = ["recording", *tables.header(inputs.flicker[0])]
     tables.write_table(outputs.flicker, flicker, columns)
     for path, rows, first in (
@@ -71,6 +78,7 @@ def make_study(inputs, outputs, settings):
     comparisons = study_tables.comparison_rows(
         settings["planned"], responses, alphas, _people(inputs), in_study, settings["seed"]
     )
+    comparisons = study_tables.mark_measured(comparisons, settings["planned"], measured)
     tables.write_table(outputs.comparisons, comparisons, COMPARISONS)
     group = study_tables.group_rows(relations, windows, in_study, settings["seed"])
     tables.write_table(outputs.group, group, GROUP)

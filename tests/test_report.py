@@ -370,7 +370,7 @@ def test_page_needs_no_other_file_and_no_script(usual):
     assert all(source.startswith("data:image/png;base64,") for source in page.all("img", "src"))
     assert not {"script", "link", "iframe", "object"} & {tag for tag, _ in page.elements}
     links = page.all("a", "href")
-    ours = re.compile(r"#[a-z]+|study/[a-z/_]+\.(tsv|png)|manifest\.tsv")
+    ours = re.compile(r"#[a-z]+|study/[a-z/_]+\.(tsv|png|txt)|manifest\.tsv")
     assert all(ours.fullmatch(link) for link in links)
     assert "url(" not in usual[1]
     assert "@import" not in usual[1]

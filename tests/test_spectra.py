@@ -4,8 +4,8 @@ import math
 
 import numpy as np
 import pytest
-from onbin import spectra
-from realdata import require
+from onbin import spectra, tagging
+from realdata import LED_TAGS_HZ, led_dataset, require, weeg_dataset
 
 
 def wave(rate_hz, n, *parts):
@@ -145,3 +145,41 @@ def test_bin_coefficients_measure_each_term_in_its_own_window():
     np.testing.assert_allclose(np.abs(found[:, 0, :, 0]), [[1.5, 0.7]] * 2, atol=0.06)
     # both windows start at onset + the same phase of the wave, so phases agree when referred
     assert np.angle(found[0, 0, 1, 0]) == pytest.approx(np.angle(found[1, 0, 1, 0]), abs=0.05)
+
+
+def plain_snr(signal_uv, rate_hz, frequency_hz):
+    """Power at a frequency over the mean of ten bins on each side, skipping one."""
+    width_hz = rate_hz / len(signal_uv)
+    beside = np.array(tagging.neighbour_offsets(10, 1)) * width_hz
+    found = np.abs(spectra.project(signal_uv, rate_hz, frequency_hz + np.r_[0, beside])) ** 2
+    return found[0] / found[1:].mean()
+
+
+@pytest.mark.parametrize(
+    ("person", "hz", "snr"), [("05", 8, 65.8), ("04", 7, 53.8), ("01", 8, 35.8), ("02", 6, 6.0)]
+)
+def test_published_lights_have_the_snr_that_was_found_by_other_means(tmp_path, person, hz, snr):
+    # Kołodziej et al., Warsaw University of Technology: Oz over the whole 30 s, unwindowed
+    import mne
+
+    dataset = led_dataset(tmp_path / "led")
+    run = LED_TAGS_HZ.index(hz) + 1
+    path = dataset / f"sub-{person}/eeg/sub-{person}_task-led_run-{run}_eeg.vhdr"
+    raw = mne.io.read_raw_brainvision(path, verbose="error")
+    signal_uv = raw.get_data(picks=["Oz"])[0] * 1e6
+    assert plain_snr(signal_uv, 256, hz) == pytest.approx(snr, rel=0.02)  # the trend alone differs
+
+
+def test_a_display_of_60_hz_shows_its_ninth_part_not_6_6_hz(tmp_path):
+    # weeg-vnu (MIT): nominal 6.6 Hz, truly 60/9; ten seconds after each marker
+    import mne
+
+    dataset = weeg_dataset(tmp_path / "weeg")
+    path = dataset / "sub-01/eeg/sub-01_task-flicker_run-1_eeg.vhdr"
+    raw = mne.io.read_raw_brainvision(path, verbose="error")
+    signal_uv = raw.get_data().mean(axis=0) * 1e6
+    for onset_s in (1, 21, 41, 61):
+        block = signal_uv[(onset_s + 1) * 256 : (onset_s + 10) * 256]
+        assert plain_snr(block, 256, 60 / 9) > 6  # 6 to 28 by channel in the recordings' notes
+        # 0.067 Hz lose 5.9 dB in 9 s at the tag (sinc of 0.6 bins), and all at the harmonic
+        assert plain_snr(block, 256, 2 * 6.6) < plain_snr(block, 256, 2 * 60 / 9) / 4

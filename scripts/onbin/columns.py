@@ -179,6 +179,8 @@ COLUMNS = {
     "phase_steps_at": _text("Where they are: time in the recording in s, and size in degrees."),
     "used_hz": Column("Frequency that the measures rest on.", "Hz"),
     "frequency_source": _text("as set, or measured: the frequency found was adopted."),
+    "measured_tags": _text("Tags whose measured frequency was adopted in some recording."),
+    "measured_in": _text("People whose response rests on a measured frequency that was adopted."),
     # response
     "harmonics": _text(
         "Harmonics that the sum or the references hold; those shared with another term are left "

@@ -63,6 +63,7 @@ def relation_rows(
         )
         yield {
             "tag": tag,
+            "frequency_source": ", ".join(sorted({row["frequency_source"] for row in rows})),
             "windows": found.n_windows,
             "rho": found.rho,
             "rho_partial": found.partial_rho,

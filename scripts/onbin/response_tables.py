@@ -237,6 +237,7 @@ def window_rows(
                         "condition": condition,
                         "tag": term.tag,
                         "term": term.term,
+                        "frequency_source": coefficients.source(term),
                         "site": str(coefficients.site[site]),
                         "projected_amplitude_uv": projected_uv[row, site],
                     }

@@ -8,6 +8,7 @@ import numpy as np
 from onbin import inference, relation
 from onbin.columns import COLUMNS
 from onbin.errors import SettingsError
+from onbin.flicker_tables import MEASURED
 from onbin.relation_tables import ATTENDED, UNATTENDED
 from onbin.response_tables import SUM
 
@@ -110,6 +111,40 @@ def comparison_rows(
     corrected = inference.holm(np.array([row["p"] for row in rows])) if rows else []
     for row, p in zip(rows, corrected, strict=True):
         yield row | {"p_holm": p}
+
+
+def measured_tags(flicker: Rows, participants: Mapping[str, Sequence[str]]) -> dict[str, list]:
+    """Tags of each participant whose measured frequency was adopted in some recording.
+
+    Parameters
+    ----------
+    flicker : rows
+        Where each recording shows each tag.
+    participants : mapping
+        Recordings of each participant.
+    """
+    return {
+        who: sorted(
+            {
+                row["tag"]
+                for row in flicker
+                if row["recording"] in recordings and row["frequency_source"] == MEASURED
+            }
+        )
+        for who, recordings in participants.items()
+    }
+
+
+def mark_measured(
+    rows: Iterable[Mapping[str, Any]],
+    comparisons: Sequence[Mapping[str, Any]],
+    measured: Mapping[str, Sequence[str]],
+) -> Iterator[dict[str, Any]]:
+    """Name in each comparison the people of whom it uses a measured frequency."""
+    for row, comparison in zip(rows, comparisons, strict=True):
+        tags = {cell["tag"] for side in ("plus", "minus") for cell in comparison[side]}
+        people = [who for who in row["who"].split() if tags & set(measured[who])]
+        yield {**row, "measured_in": " ".join(people)}
 
 
 def _difference(table: Rows, who: str, comparison: Mapping[str, Any]) -> float | None:
