@@ -23,6 +23,7 @@ try:
         [*workflow.configfiles, Path(workflow.basedir) / "config" / "config.yaml"][0],
         workflow.config_settings.config,
     )
+    layout.check_results(STUDY.dataset.results, STUDY.dataset.folder)
     RECORDINGS = layout.find_recordings(
         STUDY.dataset.folder, STUDY.dataset.tasks, STUDY.dataset.participants
     )

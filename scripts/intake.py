@@ -7,6 +7,8 @@ from onbin.runner import run
 def intake(inputs, outputs, settings):
     """Bring a recording to its working rate."""
     recording = settings["recording"]
+    events = dataset.events_file(inputs.files)
+    dataset.check_events(events)
     raw = dataset.read_recording(settings["folder"], recording, settings["extension"])
     channels = dataset.choose_channels(raw, settings["flicker"]["photodiode"])
     rate = tagging.exact_rate(raw.info["sfreq"])
@@ -21,7 +23,7 @@ def intake(inputs, outputs, settings):
     dataset.check_scale(data_uv, raw)
     working = dataset.with_data(raw, data_uv, float(rate / factor))
     trials = dataset.read_trials(
-        dataset.events_file(inputs.files),
+        events,
         settings["conditions"],
         layout.entities(recording),
         raw.n_times / float(rate),

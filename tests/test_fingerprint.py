@@ -1,5 +1,8 @@
 """A change reruns what it touches: fingerprints of scripts and what they import."""
 
+import os
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -47,6 +50,26 @@ def test_what_changes_a_fingerprint(scripts, file, text, changes):
     before = print_of(scripts)
     (scripts / file).write_text(text)
     assert (print_of(scripts) != before) is changes
+
+
+def test_another_process_finds_the_same():
+    # sets come in another order in each process; a script and a module may share their name
+    command = (
+        "from onbin.fingerprint import fingerprint;"
+        "print([fingerprint(f'{step}.py') for step in ('sensors', 'components', 'report')])"
+    )
+    found = {
+        subprocess.run(
+            [sys.executable, "-c", command],
+            cwd=SCRIPTS,
+            env={**os.environ, "PYTHONHASHSEED": str(seed)},
+            capture_output=True,
+            text=True,
+            check=True,
+        ).stdout
+        for seed in range(6)
+    }
+    assert len(found) == 1
 
 
 def test_a_template_counts(scripts):

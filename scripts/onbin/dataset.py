@@ -58,11 +58,24 @@ def read_recording(folder: str | Path, name: str, extension: str):
             warnings.simplefilter("ignore")
             return mne_bids.read_raw_bids(path, verbose="error")
     except Exception as error:  # readers raise whatever a damaged file leads them to
-        first_line = next(iter(str(error).splitlines()), type(error).__name__)
+        first_line = next(iter(str(error).splitlines()), "") or type(error).__name__
         raise DataError(
             f"{path.fpath} cannot be read ({first_line}). Check that the file is complete, or "
             "leave the recording out."
         ) from error
+
+
+def check_events(events: str | Path | None) -> None:
+    """See that events.tsv has what BIDS requires, before anybody reads it in earnest.
+
+    Raises
+    ------
+    DataError
+        If a column is missing or a time is no number.
+    """
+    for number, row in enumerate(read_foreign(events) if events else [], start=2):
+        for column in ("onset", "duration"):
+            _seconds(events, number, column, row)
 
 
 def choose_channels(raw, photodiode: str | None = None) -> list[dict[str, Any]]:

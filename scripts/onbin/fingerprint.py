@@ -21,13 +21,15 @@ def fingerprint(script: str | Path) -> str:
         The package stands beside it.
     """
     digest = hashlib.sha256()
+    script = Path(script)
     for path in closure(script):
-        digest.update(f"{path.name}:{_tree(path)}".encode())
+        name = path.relative_to(script.parent).as_posix()
+        digest.update(f"{name}:{_tree(path)}".encode())
     return digest.hexdigest()[:16]
 
 
 def closure(script: str | Path) -> list[Path]:
-    """The script and the modules and templates of the package that it reaches, sorted by name."""
+    """The script and the modules and templates of the package that it reaches, sorted."""
     script = Path(script)
     package = script.parent / PACKAGE
     reached, waiting = {script}, [script]
@@ -36,7 +38,7 @@ def closure(script: str | Path) -> list[Path]:
             if path not in reached:
                 reached.add(path)
                 waiting.append(path)
-    return sorted(reached, key=lambda path: path.name)
+    return sorted(reached)
 
 
 @cache

@@ -141,6 +141,31 @@ def benchmark(results: str, step: str, scope: str) -> str:
     return f"{results}/logs/{step}/{scope}.benchmark.tsv"
 
 
+def check_results(results: str | Path, folder: str | Path) -> None:
+    """See that results cannot fall among the data of the dataset.
+
+    Raises
+    ------
+    SettingsError
+        If they would, or if the folder cannot be made.
+    """
+    place, dataset = Path(results).resolve(), Path(folder).resolve()
+    inside = place == dataset or dataset in place.parents
+    if inside and dataset / "derivatives" not in place.parents:
+        raise SettingsError(
+            f"dataset.results: {results} lies in the dataset, which is only read. Choose a folder "
+            f"outside it, or one below {Path(folder) / 'derivatives'}."
+        )
+    if place in dataset.parents:
+        raise SettingsError(
+            f"dataset.results: {results} holds the dataset {folder}. Choose another folder."
+        )
+    nearest = next(parent for parent in (place, *place.parents) if parent.exists())
+    if not nearest.is_dir() or not os.access(nearest, os.W_OK):
+        found = "is a file" if not nearest.is_dir() else "cannot be written"
+        raise SettingsError(f"dataset.results: {nearest} {found}. Choose another folder.")
+
+
 def find_recordings(
     folder: str | Path, tasks: Collection[str] = (), participants: Collection[str] = ()
 ) -> list[Recording]:
@@ -188,13 +213,14 @@ def find_recordings(
             own = inherited + _data_files(root / session)
             recordings += _in_folder(folder, root / session / "eeg", own)
     if tasks:
-        found_tasks = sorted({r.entities.get("task", "") for r in recordings})
-        recordings = [r for r in recordings if r.entities.get("task") in tasks]
-        if not recordings:
+        found_tasks = {r.entities.get("task", "") for r in recordings}
+        missing_tasks = sorted(set(tasks) - found_tasks)
+        if missing_tasks:
             raise SettingsError(
-                f"dataset.tasks: no recording of {folder} has task {', '.join(tasks)}; there are "
-                f"{', '.join(found_tasks) or 'no recordings'}."
+                f"dataset.tasks: no recording of {folder} has task {', '.join(missing_tasks)}; "
+                f"there are {', '.join(sorted(found_tasks)) or 'no recordings'}."
             )
+        recordings = [r for r in recordings if r.entities["task"] in tasks]
     if not recordings:
         raise SettingsError(
             f"dataset.folder: {folder} has no EEG recording; expected files such as "
@@ -208,7 +234,7 @@ def _data_files(folder: Path) -> list[str]:
     if not folder.is_dir():
         return []
     pattern = re.compile(r"(?:.*_)?(?:eeg|events|channels|electrodes|coordsystem)\.(?:json|tsv)$")
-    return [e.path for e in os.scandir(folder) if pattern.match(e.name)]
+    return sorted(e.path for e in os.scandir(folder) if pattern.match(e.name))
 
 
 def _in_folder(dataset: Path, folder: Path, inherited: list[str]) -> list[Recording]:

@@ -41,8 +41,9 @@ def content_hash(path: str | Path) -> str:
             noted = json.loads(beside.read_text(encoding="utf-8"))
         except (OSError, ValueError):
             noted = {}
-        if isinstance(noted, dict) and "Provenance" in noted:
-            return noted["Provenance"]["sha256"]
+        provenance = noted.get("Provenance") if isinstance(noted, dict) else None
+        if isinstance(provenance, dict) and "sha256" in provenance:
+            return provenance["sha256"]
     return sha256(path)
 
 

@@ -96,13 +96,16 @@ def occupied(
     below_hz: float,
     line_hz: float | None,
 ) -> list[Fraction]:
-    """Frequencies that hold more than noise: all harmonics and sums of what flickers, the mains."""
+    """Frequencies that hold more than noise: all harmonics and sums of what flickers, the mains.
+
+    One that several of them have stands there as often.
+    """
     driven = {name: tags[name] for name in flickering}
     count = max((int(below_hz / f) for f in driven.values()), default=0)
     terms = tagging.harmonics(driven, count) + tagging.intermodulations(driven, max(order, 2))
     line = tagging.exact(line_hz) if line_hz else None
     mains = [line * n for n in range(1, int(below_hz / line_hz) + 1)] if line else []
-    return sorted({term.frequency for term in terms if term.frequency < below_hz} | set(mains))
+    return sorted([term.frequency for term in terms if term.frequency < below_hz] + mains)
 
 
 def response_rows(
@@ -156,10 +159,8 @@ def response_rows(
             yield from _rows(coefficients, common, measured)
             if driven and term.harmonic and about["phase_locked"]:
                 width = 1 / coefficients.durations_s[index]
-                others = [f for f in occupied_in[condition] if f != term.frequency]
-                shared = any(abs(f - term.frequency) < width for f in others) or _is_shared(
-                    term, coefficients.terms, about["flickering"]
-                )
+                within = [f for f in occupied_in[condition] if abs(f - term.frequency) < width]
+                shared = len(within) > 1  # itself is one
                 of_tag.setdefault(term.tag, []).append((term, measured, shared))
         for tag, harmonics in of_tag.items():
             own = [(term, measured) for term, measured, shared in harmonics if not shared]
@@ -185,14 +186,6 @@ def response_rows(
                     "latency_high_ms": (latency_s + half_s) * 1e3,
                 }
                 yield from _rows(coefficients, common, values)
-
-
-def _is_shared(term: Term, terms: Sequence[Term], flickering: Sequence[str]) -> bool:
-    """Tell whether another driven term has the very same frequency."""
-    return any(
-        other != term and other.frequency == term.frequency and other.driven_by(flickering)
-        for other in terms
-    )
 
 
 def _detection(

@@ -87,9 +87,11 @@ def _whole_or_absent(outputs: dict[str, Path]) -> Iterator[dict[str, Path]]:
     first = next(iter(outputs.values()))
     mark = f".part-{first.name}-{socket.gethostname()}-"
     first.parent.mkdir(parents=True, exist_ok=True)
-    for stale in first.parent.glob(f"{mark}*"):
-        if not _alive(int(stale.name.removeprefix(mark))):
-            shutil.rmtree(stale, ignore_errors=True)
+    for left in first.parent.glob(f"{mark}*"):
+        pid = left.name.removeprefix(mark)
+        # a host's name may begin like another's; a number may be given to a process again
+        if pid.isdigit() and (int(pid) == os.getpid() or not _alive(int(pid))):
+            shutil.rmtree(left, ignore_errors=True)
     folder = first.parent / f"{mark}{os.getpid()}"
     folder.mkdir()
     try:

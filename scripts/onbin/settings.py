@@ -12,7 +12,7 @@ from pathlib import Path
 from typing import Annotated, Any, Literal
 
 import yaml
-from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationError, model_validator
 
 from onbin import plan, tagging
 from onbin.errors import SettingsError
@@ -22,7 +22,15 @@ Share = Annotated[float, Field(ge=0, le=1)]
 Positive = Annotated[float, Field(gt=0)]
 NotNegative = Annotated[float, Field(ge=0)]
 Count = Annotated[int, Field(ge=1)]
-Interval = Annotated[list[Positive], Field(min_length=2, max_length=2)]
+
+
+def _rising(pair: list[float]) -> list[float]:
+    if pair[0] >= pair[1]:
+        raise ValueError(f"the second number must be larger than the first, found {pair}")
+    return pair
+
+
+Interval = Annotated[list[Positive], Field(min_length=2, max_length=2), AfterValidator(_rising)]
 ExactNumber = Annotated[int | float | str, Field(description="a number, or a ratio such as 120/7")]
 ComponentClass = Literal["muscle", "eye", "heart", "line noise", "channel noise", "other"]
 
@@ -319,7 +327,7 @@ class Settings(Part):
     flicker: Flicker = Flicker()
     tags: dict[Label, Tag] = Field({}, description="Frequency tags by name.")
     conditions: dict[Label, Condition] = Field(min_length=1, description="Conditions by name.")
-    regions: dict[Label, list[str]] = Field(
+    regions: dict[Label, Annotated[list[str], Field(min_length=1)]] = Field(
         min_length=1, description="Regions by name: lists of channels."
     )
     intake: Intake = Intake()
@@ -509,6 +517,8 @@ Problem = tuple[tuple, str]
 
 _EXPECTED = {
     "missing": "is required; add it",
+    "too_long": "has too many items",
+    "too_short": "has too few items",
     "string_pattern_mismatch": "must be lower-case letters, digits and _, and begin with a letter",
     "string_type": "must be text (put it between quotation marks)",
     "bool_type": "must be true or false",
@@ -658,8 +668,8 @@ def _plan_problems(settings: Settings) -> Iterator[Problem]:
         if not comparison.measure.startswith("alpha"):
             for side in ("plus", "minus"):
                 for index, cell in enumerate(getattr(comparison, side)):
+                    where = ("comparisons", name, side, index)
                     if cell.tag is None:
-                        where = ("comparisons", name, side, index)
                         yield where, f"{comparison.measure} is measured at a tag; add tag:"
 
 

@@ -43,7 +43,7 @@ def participant_row(
     reasons = [
         f"{name}: {bad[name]} of {len(rows)} channels are bad, more than {max_bad_share:.0%}"
         for name, rows in sensors.items()
-        if bad[name] > max_bad_share * len(rows)
+        if bad[name] / len(rows) > max_bad_share
     ]
     reasons += [
         f"{condition}: {count} windows kept, fewer than {min_windows[condition]}"
@@ -195,6 +195,12 @@ def _tested(
     elif comparison["groups"]:
         column, first_label, second_label = comparison["groups"]
         labels = _column(people, values, column, f"{key}.groups")
+        found = {row.get(column) for row in people.values()} - {None}
+        if absent := sorted({first_label, second_label} - found):
+            raise SettingsError(
+                f"{key}.groups: nobody in participants.tsv has {column} {', '.join(absent)}; "
+                f"found {', '.join(sorted(found))}."
+            )
         first, second = (
             np.array([values[who] for who in values if labels[who] == label])
             for label in (first_label, second_label)

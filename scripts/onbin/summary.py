@@ -25,5 +25,6 @@ def closing(results: str, seconds: float) -> str:
         ]
     if report.is_file():
         lines.append(f"The report is {report}")
-    lines.append(f"Time taken: {seconds // 60:.0f} min {seconds % 60:.0f} s")
+    minutes, rest = divmod(round(seconds), 60)
+    lines.append(f"Time taken: {minutes} min {rest} s")
     return "\n".join(lines)

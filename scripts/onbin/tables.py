@@ -11,7 +11,8 @@ from onbin.columns import COLUMNS
 from onbin.errors import DataError
 
 MISSING = "n/a"
-FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
+FORMULA_STARTS = ("=", "+", "-", "@")
+ONE_LINE = str.maketrans("\t\n\r", "   ")  # a cell holds no tab and no line end
 
 
 def write_table(
@@ -55,12 +56,13 @@ def read_foreign(path: str | Path) -> list[dict[str, str]]:
         text = Path(path).read_text(encoding="utf-8-sig")
     except UnicodeDecodeError:
         raise DataError(f"{path} is not text in UTF-8; save it as UTF-8.") from None
-    lines = [line for line in text.splitlines() if line.strip()]
+    numbered = enumerate(text.split("\n"), start=1)
+    lines = [(number, line) for number, line in numbered if line.strip()]
     if not lines:
         return []
-    header = [name.strip() for name in lines[0].split("\t")]
+    header = [name.strip() for name in lines[0][1].split("\t")]
     rows = []
-    for number, line in enumerate(lines[1:], start=2):
+    for number, line in lines[1:]:
         cells = [cell.strip() for cell in line.split("\t")]
         if len(cells) != len(header):
             raise DataError(
@@ -91,6 +93,7 @@ def _written(value: Any) -> str:
     if value is None:
         return MISSING
     if isinstance(value, str):
+        value = value.translate(ONE_LINE)
         # a cell that a spreadsheet would take for a formula is left a text
         return f"'{value}" if value.startswith(FORMULA_STARTS) else value or MISSING
     if isinstance(value, bool) or type(value).__name__ == "bool":
@@ -113,7 +116,7 @@ def _read(name: str, text: str) -> Any:
         return int(text)
     if kind == "boolean":
         return text == "true"
-    return text
+    return text.removeprefix("'") if text[1:].startswith(FORMULA_STARTS) else text
 
 
 def header(path: str | Path) -> list[str]:

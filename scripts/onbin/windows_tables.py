@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from onbin import spectra
+from onbin import spectra, tagging
 from onbin.tagging import Term
 from onbin.windows import LEFT_OUT, Unplaced, Window, WindowVerdict, chain_gain
 
@@ -41,8 +41,8 @@ def samples_by_condition(
     length_s, rest_length_s : float
         As set.
     """
-    longest = max(term_samples.values(), default=int(length_s * rate))
-    rest = max(int(rest_length_s * rate), longest)
+    longest = max(term_samples.values(), default=int(tagging.exact(length_s) * rate))
+    rest = max(int(tagging.exact(rest_length_s) * rate), longest)
     return {name: longest if tags else rest for name, tags in flickering.items()}
 
 
@@ -111,7 +111,7 @@ def survival_rows(
         if not chosen:
             continue
         frequency_hz = float(term.frequency)
-        shown = flickering[chosen[0].condition]
+        shown = {tag for window in chosen for tag in flickering[window.condition]}
         coefficients = spectra.bin_coefficients(
             signal_uv,
             np.array([window.start_sample for window in chosen]),
