@@ -33,3 +33,7 @@ rule cleaned:
 
 onsuccess:
     print(closing_summary())
+
+
+onerror:
+    print(closing_failures())

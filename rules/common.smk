@@ -116,3 +116,7 @@ def benchmark_of(step, scope="study"):
 
 def closing_summary():
     return summary.closing(RESULTS, time.time() - STARTED_S)
+
+
+def closing_failures():
+    return summary.failed(RESULTS, STARTED_S)

@@ -35,3 +35,14 @@ def test_people_and_report(tmp_path):
 )
 def test_time_and_nothing_else_where_nothing_was_made(tmp_path, seconds, told):
     assert summary.closing(str(tmp_path), seconds) == f"\nTime taken: {told}"
+
+
+def test_failures_are_listed_with_their_reason_and_log(tmp_path):
+    log = tmp_path / "logs" / "intake" / "sub-02" / "eeg" / "sub-02_task-x.log"
+    log.parent.mkdir(parents=True)
+    log.write_text("INFO reading\nERROR intake: no events. Give some.\n")
+    told = summary.failed(str(tmp_path), since=0)
+    assert told.startswith("\n1 failed")
+    assert "sub-02/eeg/sub-02_task-x, intake: no events. Give some." in told
+    assert str(log) in told
+    assert "1 failed" not in summary.failed(str(tmp_path), since=log.stat().st_mtime + 1)
