@@ -484,3 +484,11 @@ def test_split_half_reliability_of_known_variances():
     np.testing.assert_allclose(several, inference.split_half_reliability(first, second))
     assert np.isnan(inference.split_half_reliability([1, 2], [1, 2]))
     assert np.isnan(inference.split_half_reliability([1, 1, 1], [1, 2, 3]))
+
+
+def test_a_perfect_repeated_measures_correlation_has_no_p_to_speak_of():
+    found = inference.repeated_measures_correlation(
+        [0, 0, 0, 1, 1, 1], [1, 2, 3, 5, 6, 7], [2, 4, 6, 0, 2, 4]
+    )
+    assert found.r == pytest.approx(1)
+    assert found.p == pytest.approx(0, abs=1e-6)  # df = 3: t is infinite or nearly so

@@ -5,7 +5,7 @@ estimate is that of maximum likelihood for a sinusoid in white noise whose ampli
 unknown in each stretch: the frequency of the largest summed power. Units: µV, Hz, s.
 """
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -19,8 +19,10 @@ SEARCH_SHARE = 0.02  # how far from the nominal frequency is looked, as a share 
 OVERSAMPLING = 8  # candidates for each 1/T
 MAXIMA_PER_CELL = 2  # independent chances for noise to peak within 1/T, about
 NEIGHBOURS = 10  # bins on each side of the searched range that the noise is taken from
+RHYTHM_HZ = 0.3  # a rhythm of the brain is at least this wide to each side, a flicker is not
+FEWEST_NEAR = 2  # bins on each side of the response that tell it from a rhythm, at least
 PRESENCE_LEVEL = 0.01  # chance that noise alone passes for a response somewhere in the range
-OFFSET_LEVEL = 0.01  # chance that a response at its place passes for an offset
+OFFSET_LEVEL = 0.01  # chance that noise elsewhere than at the response leads the estimate away
 INTERVAL_SD = 2.575829  # 99 % interval of a normal estimate
 STEP_LEVEL = 0.001  # chance that a lost frame is found in a recording without any
 FEWEST_PIECES = 4  # pieces of a stretch that a step or a drift can be seen in
@@ -130,43 +132,58 @@ def locate(stretches: Stretches, nominal_hz: float, avoid_hz: Sequence[float] = 
     Returns
     -------
     Location
-        With the verdict ``cannot tell`` where power in the range could well be noise.
+        With the verdict ``cannot tell`` where power in the range could well be noise, or that of
+        another term within a bin.
     """
+    nothing = (np.nan,) * 3
     bin_hz = 1 / stretches.longest_s
     nearest_hz = min((abs(f - nominal_hz) for f in avoid_hz), default=np.inf)
+    if nearest_hz < bin_hz:
+        return Location(CANNOT_TELL, *nothing, np.nan, np.nan, *nothing, ())
     reach_hz = min(SEARCH_SHARE * nominal_hz, nearest_hz / 2)
-    noise_uv2 = _noise_per_sample(stretches, nominal_hz, reach_hz, bin_hz, avoid_hz)
     count = int(np.ceil(reach_hz / bin_hz * OVERSAMPLING))
     grid_hz = nominal_hz + np.linspace(-reach_hz, reach_hz, 2 * count + 1)
-    power = summed_power(stretches, grid_hz, noise_uv2)
-
+    power = summed_power(stretches, grid_hz, 1.0)
     best, freedom = int(np.argmax(power)), 2 * len(stretches.signals_uv)
-    cells = max(2 * reach_hz / bin_hz, 1.0) * MAXIMA_PER_CELL
-    chance = f_survival(power[best] / freedom, freedom, freedom * 2 * NEIGHBOURS)
-    presence_p = min(1.0, cells * float(chance))
-    if presence_p > PRESENCE_LEVEL:
-        nothing = (np.nan,) * 3
-        return Location(CANNOT_TELL, *nothing, np.nan, presence_p, *nothing, ())
-
-    estimate_hz = _climb(
+    present_hz = [float(grid_hz[best]), *avoid_hz]
+    noise_uv2, noise_freedom = _noise_per_sample(
+        stretches, nominal_hz, avoid_hz, lambda bin_hz: reach_hz + bin_hz * _bins(2, NEIGHBOURS)
+    )
+    count = int(np.ceil(reach_hz / bin_hz * OVERSAMPLING))
+    grid_hz = nominal_hz + np.linspace(-reach_hz, reach_hz, 2 * count + 1)
+    powers = summed_power(stretches, grid_hz, noise_uv2)
+    estimate_hz, power = _climb(
         lambda f: summed_power(stretches, np.array([f]), noise_uv2)[0],
-        grid_hz[best],
+        grid_hz[int(np.argmax(powers))],
         reach_hz / count,
     )
-    information = _information(stretches, estimate_hz, noise_uv2)
-    half_hz = INTERVAL_SD / np.sqrt(information.sum())
-    at_nominal, at_estimate = summed_power(
-        stretches, np.array([nominal_hz, estimate_hz]), noise_uv2
-    )
-    # a peak of noise may outdo a weak response: the ratio of likelihoods must stand out from all
-    ratio_p = cells * float(chi2_survival(at_estimate - at_nominal, 1))
-    inside = abs(estimate_hz - nominal_hz) <= half_hz or ratio_p > OFFSET_LEVEL
-    excess = max(power[best] / freedom - 1, np.finfo(float).tiny)
-    return Location(
-        AS_SET if inside else OFFSET,
+    near_uv2, near_freedom = _noise_per_sample(
+        stretches,
         estimate_hz,
-        estimate_hz - half_hz,
-        estimate_hz + half_hz,
+        avoid_hz,
+        lambda bin_hz: bin_hz * _bins(1, int(np.clip(RHYTHM_HZ / bin_hz, FEWEST_NEAR, NEIGHBOURS))),
+    )
+
+    freedom = 2 * len(stretches.signals_uv)
+    cells = max(2 * reach_hz / bin_hz, 1.0) * MAXIMA_PER_CELL
+    chance = np.fmax(
+        f_survival(power / freedom, freedom, noise_freedom),
+        f_survival(power / freedom * noise_uv2 / near_uv2, freedom, near_freedom),
+    )
+    presence_p = min(1.0, cells * float(chance))
+    if presence_p > PRESENCE_LEVEL:
+        return Location(CANNOT_TELL, *nothing, np.nan, presence_p, *nothing, ())
+
+    larger = np.fmax(near_uv2 / noise_uv2, 1.0)
+    information = _information(stretches, estimate_hz, noise_uv2 * larger)
+    half_hz = INTERVAL_SD / np.sqrt(information.sum())
+    low_hz, high_hz = _interval(estimate_hz, half_hz, power / larger, grid_hz, powers / larger)
+    excess = max(power / freedom - 1, np.finfo(float).tiny)
+    return Location(
+        AS_SET if low_hz <= nominal_hz <= high_hz else OFFSET,
+        estimate_hz,
+        low_hz,
+        high_hz,
         float(10 * np.log10(excess)),
         presence_p,
         *_drift(stretches, estimate_hz, noise_uv2, reach_hz),
@@ -186,17 +203,16 @@ def summed_power(stretches: Stretches, frequencies_hz: np.ndarray, noise_uv2: fl
     """
     total = np.zeros(len(frequencies_hz))
     for signals in _by_length(stretches):
-        coefficients = np.hstack(
-            [project(signals, stretches.rate_hz, part) for part in _parts(frequencies_hz)]
-        )
+        coefficients = _coefficients(signals, stretches.rate_hz, frequencies_hz)
         noise_power = 4 * noise_uv2 / signals.shape[-1]
         total += (np.abs(coefficients) ** 2).sum(axis=0) / (noise_power / 2)
     return total
 
 
-def _parts(frequencies_hz: np.ndarray) -> list[np.ndarray]:
-    """A few frequencies at a time: an operator over a long stretch takes memory."""
-    return np.array_split(frequencies_hz, -(-len(frequencies_hz) // 32))
+def _coefficients(signals_uv: np.ndarray, rate_hz: float, frequencies_hz: np.ndarray) -> np.ndarray:
+    """Project at a few frequencies at a time: an operator over a long stretch takes memory."""
+    parts = np.array_split(frequencies_hz, -(-len(frequencies_hz) // 32))
+    return np.concatenate([project(signals_uv, rate_hz, part) for part in parts], axis=-1)
 
 
 def _by_length(stretches: Stretches) -> list[np.ndarray]:
@@ -204,28 +220,37 @@ def _by_length(stretches: Stretches) -> list[np.ndarray]:
     return [np.stack([s for s in stretches.signals_uv if s.size == n]) for n in lengths]
 
 
+def _bins(first: int, count: int) -> np.ndarray:
+    return first + np.arange(count)
+
+
 def _noise_per_sample(
     stretches: Stretches,
-    nominal_hz: float,
-    reach_hz: float,
-    bin_hz: float,
+    centre_hz: float,
     avoid_hz: Sequence[float],
-) -> float:
-    """Variance per sample that white noise of the same density near the tag would have, in µV²."""
-    offsets = reach_hz + bin_hz * (2 + np.arange(NEIGHBOURS))
-    beside_hz = np.concatenate([nominal_hz - offsets, nominal_hz + offsets])
+    offsets_hz: Callable[[float], np.ndarray],
+) -> tuple[float, int]:
+    """Variance per sample of white noise as dense as that beside a frequency, in µV².
+
+    ``offsets_hz`` makes distances to it from the width of a bin. The second value is the number of
+    degrees of freedom; where all bins are taken the first is NaN.
+    """
     avoid = np.asarray(avoid_hz, dtype=float)
-    free = (np.abs(beside_hz[:, None] - avoid) > 2 * bin_hz).all(axis=1)
-    beside_hz = beside_hz[free & (beside_hz > 2 * bin_hz) & (beside_hz < stretches.rate_hz / 2)]
-    variances = [
-        np.abs(project(signals, stretches.rate_hz, beside_hz)) ** 2 * signals.shape[-1] / 4
-        for signals in _by_length(stretches)
-    ]
-    return float(np.concatenate(variances).mean())
+    variances = []
+    for signals in _by_length(stretches):
+        bin_hz = stretches.rate_hz / signals.shape[-1]
+        offsets = offsets_hz(bin_hz)
+        beside_hz = np.concatenate([centre_hz - offsets, centre_hz + offsets])
+        free = (np.abs(beside_hz[:, None] - avoid) > 2 * bin_hz).all(axis=1)
+        free &= (beside_hz > 2 * bin_hz) & (beside_hz < stretches.rate_hz / 2)
+        coefficients = project(signals, stretches.rate_hz, beside_hz[free])
+        variances.append((np.abs(coefficients) ** 2 * signals.shape[-1] / 4).ravel())
+    found = np.concatenate(variances)
+    return (float(found.mean()), 2 * found.size) if found.size else (np.nan, 0)
 
 
-def _climb(power, start: float, step: float) -> float:
-    """Top of a peak that lies within a step of where it was seen."""
+def _climb(power, start: float, step: float) -> tuple[float, float]:
+    """Place and height of a peak that lies within a step of where it was seen."""
     from scipy.optimize import minimize_scalar
 
     found = minimize_scalar(
@@ -234,7 +259,23 @@ def _climb(power, start: float, step: float) -> float:
         method="bounded",
         options={"xatol": step * 1e-6},
     )
-    return float(found.x)
+    return float(found.x), -float(found.fun)
+
+
+def _interval(
+    estimate: float, half: float, power: float, candidates: np.ndarray, powers: np.ndarray
+) -> tuple[float, float]:
+    """99 % interval: the normal one, widened to whatever else explains the signal about as well.
+
+    At a low SNR a peak of noise may outdo a weak response: the ratio of likelihoods must stand out
+    from all candidates, which stand `OVERSAMPLING` to a cell.
+    """
+    chances = max(len(candidates) / OVERSAMPLING, 1.0) * MAXIMA_PER_CELL
+    rivals = candidates[chances * chi2_survival(power - powers, 1) > OFFSET_LEVEL]
+    return (
+        float(min(estimate - half, rivals.min(initial=estimate))),
+        float(max(estimate + half, rivals.max(initial=estimate))),
+    )
 
 
 def _information(stretches: Stretches, frequency_hz: float, noise_uv2: float) -> np.ndarray:
@@ -260,20 +301,23 @@ def _drift(
     leverage = np.sum(information * (middles_s - centre_s) ** 2)
     span_s = np.ptp(middles_s)
 
-    def power(slope: float) -> float:
-        total = 0.0
+    def power(slopes: np.ndarray) -> np.ndarray:
+        total = np.zeros(len(slopes))
         for signal, middle_s in zip(parts.signals_uv, middles_s, strict=True):
-            at_hz = frequency_hz + slope * (middle_s - centre_s)
-            total += abs(project(signal, parts.rate_hz, [at_hz])[0]) ** 2 * signal.size
-        return total
+            at_hz = frequency_hz + slopes * (middle_s - centre_s)
+            total += np.abs(_coefficients(signal, parts.rate_hz, at_hz)) ** 2 * signal.size
+        return total / (2 * noise_uv2)
 
     steepest = reach_hz / span_s
     count = max(int(np.ceil(reach_hz * parts.longest_s * OVERSAMPLING / 2)), 1)
     slopes = np.linspace(-steepest, steepest, 2 * count + 1)
-    best = slopes[int(np.argmax([power(slope) for slope in slopes]))]
-    slope = _climb(power, best, steepest / count) * 60
-    half = INTERVAL_SD / np.sqrt(leverage) * 60
-    return slope, slope - half, slope + half
+    powers = power(slopes)
+    slope, height = _climb(
+        lambda x: power(np.array([x]))[0], slopes[int(np.argmax(powers))], steepest / count
+    )
+    half = INTERVAL_SD / np.sqrt(leverage)
+    low, high = _interval(slope, half, height, slopes, powers)
+    return slope * 60, low * 60, high * 60
 
 
 def _quartered(stretches: Stretches) -> Stretches:

@@ -241,7 +241,7 @@ def repeated_measures_correlation(
             np.nan, np.nan, df, nothing, np.nan, n_units, n_observations
         )
     with np.errstate(divide="ignore"):
-        t = r * np.sqrt(df / (1 - r * r))
+        t = r * np.sqrt(np.divide(df, 1 - r * r))
     half = ndtri((1 + confidence) / 2) / np.sqrt(df - 1)
     low, high = fisher_z_inverse(fisher_z(r) + np.array([-half, half])).tolist()
     return RepeatedMeasuresCorrelation(
