@@ -44,7 +44,7 @@ def test_a_whole_recording_can_be_a_trial():
     conditions = {"rest": {"events": {"task": "rest"}, "duration_s": None}}
     (trial,) = dataset.read_trials(None, conditions, {"task": "rest"}, 61.0)
     assert (trial["onset_s"], trial["duration_s"]) == (0.0, 61.0)
-    with pytest.raises(DataError, match="no events.tsv"):
+    with pytest.raises(DataError, match=r"no events.tsv"):
         dataset.read_trials(None, conditions, {"task": "other"}, 61.0)
 
 
@@ -130,7 +130,7 @@ def test_decimated_data_keep_bad_stretches_and_lose_other_marks():
 
 def test_recordings_of_one_person_need_one_rate():
     raws = [raw_of(rate_hz=256.0), raw_of(rate_hz=250.0)]
-    with pytest.raises(DataError, match="different working rates .a: 256 Hz, b: 250 Hz."):
+    with pytest.raises(DataError, match=r"different working rates .a: 256 Hz, b: 250 Hz."):
         dataset.common_rate(raws, ["a", "b"])
     assert dataset.common_rate(raws[:1], ["a"]) == 256
 

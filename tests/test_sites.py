@@ -22,7 +22,7 @@ def test_a_region_is_the_mean_of_its_channels():
 
 
 def test_a_region_without_channels_is_told():
-    with pytest.raises(DataError, match="the region back has none of its channels .O2."):
+    with pytest.raises(DataError, match=r"the region back has none of its channels .O2."):
         sites.common_sites([["O1"]], {"back": ["O2"]})
 
 
