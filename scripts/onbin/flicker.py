@@ -143,42 +143,39 @@ def locate(stretches: Stretches, nominal_hz: float, avoid_hz: Sequence[float] = 
     reach_hz = min(SEARCH_SHARE * nominal_hz, nearest_hz / 2)
     count = int(np.ceil(reach_hz / bin_hz * OVERSAMPLING))
     grid_hz = nominal_hz + np.linspace(-reach_hz, reach_hz, 2 * count + 1)
-    power = summed_power(stretches, grid_hz, 1.0)
-    best, freedom = int(np.argmax(power)), 2 * len(stretches.signals_uv)
-    present_hz = [float(grid_hz[best]), *avoid_hz]
-    noise_uv2, noise_freedom = _noise_per_sample(
-        stretches, nominal_hz, avoid_hz, lambda bin_hz: reach_hz + bin_hz * _bins(2, NEIGHBOURS)
-    )
-    count = int(np.ceil(reach_hz / bin_hz * OVERSAMPLING))
-    grid_hz = nominal_hz + np.linspace(-reach_hz, reach_hz, 2 * count + 1)
-    powers = summed_power(stretches, grid_hz, noise_uv2)
+    powers = summed_power(stretches, grid_hz, 1.0)
     estimate_hz, power = _climb(
-        lambda f: summed_power(stretches, np.array([f]), noise_uv2)[0],
+        lambda f: summed_power(stretches, np.array([f]), 1.0)[0],
         grid_hz[int(np.argmax(powers))],
         reach_hz / count,
     )
-    near_uv2, near_freedom = _noise_per_sample(
-        stretches,
-        estimate_hz,
-        avoid_hz,
-        lambda bin_hz: bin_hz * _bins(1, int(np.clip(RHYTHM_HZ / bin_hz, FEWEST_NEAR, NEIGHBOURS))),
-    )
 
+    def noise(centre_hz: float, offsets_hz: Callable[[float], np.ndarray]) -> tuple[float, float]:
+        return _noise_per_sample(stretches, estimate_hz, avoid_hz, centre_hz, offsets_hz)
+
+    noise_uv2, noise_freedom = noise(
+        nominal_hz, lambda width_hz: reach_hz + width_hz * (2 + np.arange(NEIGHBOURS))
+    )
+    near_uv2, near_freedom = noise(
+        estimate_hz,
+        lambda width_hz: np.arange(width_hz, max(RHYTHM_HZ, FEWEST_NEAR * width_hz), width_hz),
+    )
     freedom = 2 * len(stretches.signals_uv)
     cells = max(2 * reach_hz / bin_hz, 1.0) * MAXIMA_PER_CELL
     chance = np.fmax(
-        f_survival(power / freedom, freedom, noise_freedom),
-        f_survival(power / freedom * noise_uv2 / near_uv2, freedom, near_freedom),
+        f_survival(power / noise_uv2 / freedom, freedom, noise_freedom),
+        f_survival(power / near_uv2 / freedom, freedom, near_freedom),
     )
-    presence_p = min(1.0, cells * float(chance))
+    presence_p = float(np.fmin(cells * chance, 1.0))
     if presence_p > PRESENCE_LEVEL:
         return Location(CANNOT_TELL, *nothing, np.nan, presence_p, *nothing, ())
 
-    larger = np.fmax(near_uv2 / noise_uv2, 1.0)
-    information = _information(stretches, estimate_hz, noise_uv2 * larger)
-    half_hz = INTERVAL_SD / np.sqrt(information.sum())
-    low_hz, high_hz = _interval(estimate_hz, half_hz, power / larger, grid_hz, powers / larger)
-    excess = max(power / freedom - 1, np.finfo(float).tiny)
+    larger_uv2 = np.fmax(noise_uv2, near_uv2)
+    half_hz = INTERVAL_SD / np.sqrt(_information(stretches, estimate_hz, larger_uv2).sum())
+    low_hz, high_hz = _interval(
+        estimate_hz, half_hz, power / larger_uv2, grid_hz, powers / larger_uv2
+    )
+    excess = max(power / noise_uv2 / freedom - 1, np.finfo(float).tiny)
     return Location(
         AS_SET if low_hz <= nominal_hz <= high_hz else OFFSET,
         estimate_hz,
@@ -220,33 +217,36 @@ def _by_length(stretches: Stretches) -> list[np.ndarray]:
     return [np.stack([s for s in stretches.signals_uv if s.size == n]) for n in lengths]
 
 
-def _bins(first: int, count: int) -> np.ndarray:
-    return first + np.arange(count)
-
-
 def _noise_per_sample(
     stretches: Stretches,
-    centre_hz: float,
+    response_hz: float,
     avoid_hz: Sequence[float],
+    centre_hz: float,
     offsets_hz: Callable[[float], np.ndarray],
-) -> tuple[float, int]:
+) -> tuple[float, float]:
     """Variance per sample of white noise as dense as that beside a frequency, in µV².
 
-    ``offsets_hz`` makes distances to it from the width of a bin. The second value is the number of
-    degrees of freedom; where all bins are taken the first is NaN.
+    ``offsets_hz`` makes the distances from the centre out of the width of a bin. What is present,
+    the response first, is fitted along and so does not leak in. The second value is the number of
+    degrees of freedom; where no bin is left there are none, and the first is NaN.
     """
-    avoid = np.asarray(avoid_hz, dtype=float)
+    avoid = np.array([f for f in avoid_hz if f < stretches.rate_hz / 2])
     variances = []
     for signals in _by_length(stretches):
-        bin_hz = stretches.rate_hz / signals.shape[-1]
-        offsets = offsets_hz(bin_hz)
+        width_hz = stretches.rate_hz / signals.shape[-1]
+        offsets = offsets_hz(width_hz)
         beside_hz = np.concatenate([centre_hz - offsets, centre_hz + offsets])
-        free = (np.abs(beside_hz[:, None] - avoid) > 2 * bin_hz).all(axis=1)
-        free &= (beside_hz > 2 * bin_hz) & (beside_hz < stretches.rate_hz / 2)
-        coefficients = project(signals, stretches.rate_hz, beside_hz[free])
+        free = (np.abs(beside_hz[:, None] - avoid) > 2 * width_hz).all(axis=1)
+        free &= (beside_hz > 2 * width_hz) & (beside_hz < stretches.rate_hz / 2)
+        present_hz = [response_hz, *avoid]
+        coefficients = project(signals, stretches.rate_hz, beside_hz[free], present_hz)
         variances.append((np.abs(coefficients) ** 2 * signals.shape[-1] / 4).ravel())
     found = np.concatenate(variances)
-    return (float(found.mean()), 2 * found.size) if found.size else (np.nan, 0)
+    if found.size == 0:
+        return np.nan, 0
+    # the median of exponentially distributed powers is ln 2 of their mean; a phase step's side
+    # lines, in one stretch of many, do not move it. It tells as much as ln² 2 as many means.
+    return float(np.median(found) / np.log(2)), 2 * found.size * np.log(2) ** 2
 
 
 def _climb(power, start: float, step: float) -> tuple[float, float]:
