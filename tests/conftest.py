@@ -1,8 +1,11 @@
 """The demo study, run once for all tests that look at its results."""
 
 import hashlib
+import os
 from dataclasses import dataclass
 from pathlib import Path
+
+os.environ.setdefault("OMP_NUM_THREADS", "1")  # as the workflow does; two threads only wait
 
 import pytest
 from onbin import tables

@@ -85,6 +85,7 @@ def test_a_template_counts(scripts):
         ("alpha", {"alpha", "alpha_tables", "sites"}, {"response", "filtering", "relation"}),
         ("response", {"response", "response_tables", "inference"}, {"alpha", "filtering"}),
         ("relation", {"relation", "inference"}, {"alpha", "spectra"}),
+        ("spectra", {"spectra", "flicker_tables"}, {"response", "alpha", "components"}),
         ("intake", {"dataset", "filtering", "layout"}, {"alpha", "response", "inference"}),
     ],
 )

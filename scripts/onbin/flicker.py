@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from onbin.response import chi2_survival, f_survival
+from onbin.distributions import chi2_survival, f_survival
 from onbin.spectra import project
 
 AS_SET, OFFSET, CANNOT_TELL = "as set", "offset", "cannot tell"
@@ -135,11 +135,10 @@ def locate(stretches: Stretches, nominal_hz: float, avoid_hz: Sequence[float] = 
         With the verdict ``cannot tell`` where power in the range could well be noise, or that of
         another term within a bin.
     """
-    nothing = (np.nan,) * 3
     bin_hz = 1 / stretches.longest_s
     nearest_hz = min((abs(f - nominal_hz) for f in avoid_hz), default=np.inf)
     if nearest_hz < bin_hz:
-        return Location(CANNOT_TELL, *nothing, np.nan, np.nan, *nothing, ())
+        return _cannot_tell()
     reach_hz = min(SEARCH_SHARE * nominal_hz, nearest_hz / 2)
     count = int(np.ceil(reach_hz / bin_hz * OVERSAMPLING))
     grid_hz = nominal_hz + np.linspace(-reach_hz, reach_hz, 2 * count + 1)
@@ -150,27 +149,35 @@ def locate(stretches: Stretches, nominal_hz: float, avoid_hz: Sequence[float] = 
         reach_hz / count,
     )
 
-    def noise(centre_hz: float, offsets_hz: Callable[[float], np.ndarray]) -> tuple[float, float]:
-        return _noise_per_sample(stretches, estimate_hz, avoid_hz, centre_hz, offsets_hz)
-
-    noise_uv2, noise_freedom = noise(
-        nominal_hz, lambda width_hz: reach_hz + width_hz * (2 + np.arange(NEIGHBOURS))
+    present_hz = [estimate_hz, *avoid_hz]
+    far_uv2 = _noise_beside(
+        stretches,
+        nominal_hz,
+        lambda width_hz: reach_hz + width_hz * (2 + np.arange(NEIGHBOURS)),
+        present_hz,
     )
-    near_uv2, near_freedom = noise(
+    near_uv2 = _noise_beside(
+        stretches,
         estimate_hz,
-        lambda width_hz: np.arange(width_hz, max(RHYTHM_HZ, FEWEST_NEAR * width_hz), width_hz),
+        lambda width_hz: width_hz * (1 + np.arange(max(int(RHYTHM_HZ / width_hz), FEWEST_NEAR))),
+        present_hz,
     )
+    if not (far_uv2.size and near_uv2.size):
+        return _cannot_tell()
     freedom = 2 * len(stretches.signals_uv)
     cells = max(2 * reach_hz / bin_hz, 1.0) * MAXIMA_PER_CELL
-    chance = np.fmax(
-        f_survival(power / noise_uv2 / freedom, freedom, noise_freedom),
-        f_survival(power / near_uv2 / freedom, freedom, near_freedom),
+    chance = max(
+        f_survival(power / beside.mean() / freedom, freedom, 2 * beside.size)
+        for beside in (far_uv2, near_uv2)
     )
-    presence_p = float(np.fmin(cells * chance, 1.0))
+    presence_p = min(cells * float(chance), 1.0)
     if presence_p > PRESENCE_LEVEL:
-        return Location(CANNOT_TELL, *nothing, np.nan, presence_p, *nothing, ())
+        return _cannot_tell(presence_p)
 
-    larger_uv2 = np.fmax(noise_uv2, near_uv2)
+    # the median of exponentially distributed powers is ln 2 of their mean; a phase step's side
+    # lines, in one stretch of many, do not move it
+    noise_uv2 = float(np.median(far_uv2) / np.log(2))
+    larger_uv2 = max(noise_uv2, float(near_uv2.mean()))
     half_hz = INTERVAL_SD / np.sqrt(_information(stretches, estimate_hz, larger_uv2).sum())
     low_hz, high_hz = _interval(
         estimate_hz, half_hz, power / larger_uv2, grid_hz, powers / larger_uv2
@@ -186,6 +193,10 @@ def locate(stretches: Stretches, nominal_hz: float, avoid_hz: Sequence[float] = 
         *_drift(stretches, estimate_hz, noise_uv2, reach_hz),
         tuple(_steps(stretches, estimate_hz, noise_uv2)),
     )
+
+
+def _cannot_tell(presence_p: float = np.nan) -> Location:
+    return Location(CANNOT_TELL, *(np.nan,) * 4, presence_p, *(np.nan,) * 3, ())
 
 
 def summed_power(stretches: Stretches, frequencies_hz: np.ndarray, noise_uv2: float) -> np.ndarray:
@@ -217,36 +228,28 @@ def _by_length(stretches: Stretches) -> list[np.ndarray]:
     return [np.stack([s for s in stretches.signals_uv if s.size == n]) for n in lengths]
 
 
-def _noise_per_sample(
+def _noise_beside(
     stretches: Stretches,
-    response_hz: float,
-    avoid_hz: Sequence[float],
     centre_hz: float,
     offsets_hz: Callable[[float], np.ndarray],
-) -> tuple[float, float]:
-    """Variance per sample of white noise as dense as that beside a frequency, in µV².
+    present_hz: Sequence[float],
+) -> np.ndarray:
+    """Variances per sample, in µV², of white noise as dense as in each bin beside a frequency.
 
-    ``offsets_hz`` makes the distances from the centre out of the width of a bin. What is present,
-    the response first, is fitted along and so does not leak in. The second value is the number of
-    degrees of freedom; where no bin is left there are none, and the first is NaN.
+    ``offsets_hz`` makes the distances out of the width of a bin. What is present, the response
+    first, is fitted along and so does not leak in; no bin is taken within two of the others.
     """
-    avoid = np.array([f for f in avoid_hz if f < stretches.rate_hz / 2])
-    variances = []
+    known_hz = np.array([f for f in present_hz if f < stretches.rate_hz / 2])
+    found = []
     for signals in _by_length(stretches):
         width_hz = stretches.rate_hz / signals.shape[-1]
         offsets = offsets_hz(width_hz)
         beside_hz = np.concatenate([centre_hz - offsets, centre_hz + offsets])
-        free = (np.abs(beside_hz[:, None] - avoid) > 2 * width_hz).all(axis=1)
+        free = (np.abs(beside_hz[:, None] - known_hz[1:]) > 2 * width_hz).all(axis=1)
         free &= (beside_hz > 2 * width_hz) & (beside_hz < stretches.rate_hz / 2)
-        present_hz = [response_hz, *avoid]
-        coefficients = project(signals, stretches.rate_hz, beside_hz[free], present_hz)
-        variances.append((np.abs(coefficients) ** 2 * signals.shape[-1] / 4).ravel())
-    found = np.concatenate(variances)
-    if found.size == 0:
-        return np.nan, 0
-    # the median of exponentially distributed powers is ln 2 of their mean; a phase step's side
-    # lines, in one stretch of many, do not move it. It tells as much as ln² 2 as many means.
-    return float(np.median(found) / np.log(2)), 2 * found.size * np.log(2) ** 2
+        coefficients = project(signals, stretches.rate_hz, beside_hz[free], known_hz)
+        found.append((np.abs(coefficients) ** 2 * signals.shape[-1] / 4).ravel())
+    return np.concatenate(found)
 
 
 def _climb(power, start: float, step: float) -> tuple[float, float]:

@@ -9,6 +9,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from onbin.distributions import f_survival
+
 CONFIDENCE = 0.95
 CIRCULARITY_LEVEL = 0.05  # of the condition-index test that chooses between T²circ and Hotelling
 
@@ -42,20 +44,6 @@ def neighbour_noise(neighbours_uv: np.ndarray) -> Noise:
         mean_amplitude_uv=evoked.mean(axis=-1),
         bins=bins,
     )
-
-
-def f_survival(statistic: np.ndarray, numerator: float, denominator: float) -> np.ndarray:
-    """Probability of a larger value of Fisher's F."""
-    from scipy.special import fdtrc
-
-    return fdtrc(numerator, denominator, statistic)
-
-
-def chi2_survival(statistic: np.ndarray, degrees_of_freedom: float) -> np.ndarray:
-    """Probability of a larger value of χ²."""
-    from scipy.special import chdtrc
-
-    return chdtrc(degrees_of_freedom, np.maximum(statistic, 0))
 
 
 def snr_p(snr: np.ndarray, bins: int, windows: int = 1) -> np.ndarray:
