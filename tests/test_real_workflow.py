@@ -47,11 +47,20 @@ EYES_SETTINGS = {
 }
 
 
-@pytest.fixture(scope="module")
-def led(tmp_path_factory):
+@pytest.fixture(
+    scope="module",
+    params=[
+        pytest.param(["03", "05"], id="two_people"),  # the weakest and the strongest
+        pytest.param(["01", "02", "03", "04", "05"], marks=pytest.mark.long, id="all_five"),
+    ],
+)
+def led(request, tmp_path_factory):
     folder = tmp_path_factory.mktemp("led")
     dataset = led_dataset(folder / "dataset")
-    settings = {**LED_SETTINGS, "dataset": {"folder": str(dataset)}}
+    settings = {
+        **LED_SETTINGS,
+        "dataset": {"folder": str(dataset), "participants": request.param},
+    }
     finished = run_study(folder / "run", settings)
     assert finished.exit_code == 0, finished.output[-3000:]
     rows = [row for row in finished.table("responses") if row["site"] == "occipital"]
@@ -69,7 +78,7 @@ def recordings(rows):
 def test_the_light_is_the_largest_of_four_in_every_recording(led):
     _, rows = led
     found = recordings(rows)
-    assert len(found) == 20
+    assert len(found) in (8, 20)
     for (_, condition), four in found.items():
         assert len(four) == 4
         assert max(four, key=lambda row: row["amplitude_uv"])["tag"] == condition
@@ -77,10 +86,11 @@ def test_the_light_is_the_largest_of_four_in_every_recording(led):
 
 def test_the_light_is_detected_and_other_frequencies_are_not(led):
     _, rows = led
-    assert sum(row["t2circ_p"] < 0.05 for row in rows if row["driven"]) >= 19
+    lights = [row for row in rows if row["driven"]]
+    assert sum(row["t2circ_p"] < 0.05 for row in lights) >= len(lights) - 1
     others = [row for row in rows if not row["driven"]]
-    assert len(others) == 60
-    assert sum(row["present"] for row in others) <= 6
+    assert len(others) == 3 * len(lights)
+    assert sum(row["present"] for row in others) <= 0.1 * len(others)
 
 
 def test_the_light_is_where_the_settings_say(led):
