@@ -228,7 +228,7 @@ def test_results_never_fall_among_the_data(tmp_path, results):
 @pytest.mark.parametrize("results", ["bids/derivatives/onbin", "elsewhere/new/results"])
 def test_results_may_lie_beside_the_data(tmp_path, results):
     (tmp_path / "bids").mkdir()
-    layout.check_results(tmp_path / results, tmp_path / "bids")
+    assert layout.check_results(tmp_path / results, tmp_path / "bids") is None
 
 
 def test_results_below_a_file_are_refused(tmp_path):

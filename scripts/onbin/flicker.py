@@ -340,7 +340,7 @@ def _steps(
     """Jumps of the phase within stretches, as lost frames make them."""
     length = int(np.ceil(PIECE_CYCLES / frequency_hz * stretches.rate_hz))
     pieces = [signal.size // length for signal in stretches.signals_uv]
-    places = sum(max(count - 1, 0) for count in pieces)
+    places = sum(max(count - 2, 0) for count in pieces)
     for signal, start_s, count in zip(
         stretches.signals_uv, stretches.starts_s, pieces, strict=True
     ):
@@ -359,7 +359,8 @@ def _split(
     """Steps of the phase in a series of coefficients, by likelihood ratio, the largest first.
 
     Both without and with a step the frequency may be a little off, so that a step is not taken
-    for an offset nor an offset for a step.
+    for an offset nor an offset for a step. The piece in which the step lies belongs to neither
+    side, since its coefficient is a mixture of both.
     """
     count = len(z)
     if count < FEWEST_PIECES:
@@ -367,20 +368,21 @@ def _split(
     span_s = times_s[-1] - times_s[0]
     slips_hz = np.linspace(-1.5, 1.5, 61) / span_s
     series = z * np.exp(-2j * np.pi * np.outer(slips_hz, times_s - times_s[0]))
-    before = np.cumsum(series, axis=1)[:, :-1]
-    whole = series.sum(axis=1, keepdims=True)
-    straight = (np.abs(whole) ** 2).max()
-    broken = (np.abs(before) + np.abs(whole - before)) ** 2
-    slip, place = np.unravel_index(int(np.argmax(broken)), broken.shape)
-    ratio = 2 * (broken[slip, place] - straight) / (noise_power * count)
-    if chi2_survival(ratio, 1) > level:
+    running = np.cumsum(series, axis=1)
+    before, after = running[:, :-2], running[:, -1:] - running[:, 1:-1]
+    straight = (np.abs(before + after) ** 2).max(axis=0)
+    broken = (np.abs(before) + np.abs(after)) ** 2
+    gain = broken.max(axis=0) - straight
+    place = int(np.argmax(gain))
+    if chi2_survival(2 * gain[place] / (noise_power * (count - 1)), 1) > level:
         return []
-    size_rad = float(np.angle((whole[slip, 0] - before[slip, place]) / before[slip, place]))
-    place += 1
+    slip = int(np.argmax(broken[:, place]))
+    size_rad = float(np.angle(after[slip, place] / before[slip, place]))
+    inside = place + 1
     return sorted(
         [
-            (float(times_s[place]), size_rad),
-            *_split(z[:place], times_s[:place], noise_power, level),
-            *_split(z[place:], times_s[place:], noise_power, level),
+            (float(times_s[inside : inside + 2].mean()), size_rad),
+            *_split(z[:inside], times_s[:inside], noise_power, level),
+            *_split(z[inside + 1 :], times_s[inside + 1 :], noise_power, level),
         ]
     )
