@@ -161,7 +161,11 @@ COLUMNS = {
         "Hz",
         source="Kay 1993 (from memory)",
     ),
-    "found_low_hz": Column("Lower end of its 99 % interval, by the Cramér-Rao bound.", "Hz"),
+    "found_low_hz": Column(
+        "Lower end of its 99 % interval: by the Cramér-Rao bound, widened to what explains the "
+        "signal about as well where the SNR is low.",
+        "Hz",
+    ),
     "found_high_hz": Column("Upper end of that interval.", "Hz"),
     "offset_hz": Column("found_hz less set_hz.", "Hz"),
     "offset_bins": Column("The offset in bins of the window."),
@@ -171,7 +175,10 @@ COLUMNS = {
         "dB",
     ),
     "stretch_snr_db": Column("Power of the response over noise in a bin of one stretch.", "dB"),
-    "presence_p": Column("Chance of so much power near the tag without a response."),
+    "presence_p": Column(
+        "Chance of so much power near the tag without a response: the larger of two, by the noise "
+        "beyond the searched range and by that close to the frequency found."
+    ),
     "drift_hz_per_min": Column("Change of the frequency over the recording.", "Hz/min"),
     "drift_low_hz_per_min": Column("Lower end of its 99 % interval.", "Hz/min"),
     "drift_high_hz_per_min": Column("Upper end of that interval.", "Hz/min"),
