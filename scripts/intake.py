@@ -12,7 +12,8 @@ def intake(inputs, outputs, settings):
     raw = dataset.read_recording(settings["folder"], recording, settings["extension"])
     channels = dataset.choose_channels(raw, settings["flicker"]["photodiode"])
     rate = tagging.exact_rate(raw.info["sfreq"])
-    factor = max(1, int(rate / tagging.exact(settings["intake"]["working_rate_hz"])))
+    least = tagging.exact(settings["intake"]["working_rate_hz"])
+    factor = tagging.decimation_factor(rate, least)
 
     data_uv = filtering.decimate(
         lambda start, stop: raw.get_data(start=start, stop=stop) * 1e6,

@@ -157,7 +157,7 @@ class Planned:
 
 def working_rate(recorded: Fraction, least: Fraction) -> Fraction:
     """Sampling rate after intake: decimated by the largest whole factor that keeps ``least``."""
-    return recorded / max(1, int(recorded / least))
+    return recorded / tagging.decimation_factor(recorded, least)
 
 
 def assumed_setup(settings: Mapping) -> Setup:

@@ -59,6 +59,11 @@ def exact_rate(sampling_rate_hz: float) -> Fraction:
     return Fraction(sampling_rate_hz).limit_denominator(RATE_DENOMINATOR)
 
 
+def decimation_factor(rate: Fraction, least: Fraction) -> int:
+    """Largest whole factor that leaves at least a rate; 1 where the rate is lower already."""
+    return max(1, int(rate / least))
+
+
 def tag_frequency(
     refresh_hz: object = None, frames_per_cycle: int | None = None, frequency_hz: object = None
 ) -> Fraction:
