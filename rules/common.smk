@@ -9,7 +9,7 @@ from snakemake.exceptions import WorkflowError
 
 sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
-from onbin import layout, summary
+from onbin import decisions, layout, summary
 from onbin.errors import OnbinError
 from onbin.fingerprint import fingerprint
 from onbin.settings import load_settings, part
@@ -18,15 +18,20 @@ from onbin.settings import load_settings, part
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 STARTED_S = time.time()
 
+SETTINGS = Path(
+    [*workflow.configfiles, Path(workflow.basedir) / "config" / "config.yaml"][0]
+)
+
 try:
-    STUDY = load_settings(
-        [*workflow.configfiles, Path(workflow.basedir) / "config" / "config.yaml"][0],
-        workflow.config_settings.config,
-    )
+    STUDY = load_settings(SETTINGS, workflow.config_settings.config)
     layout.check_results(STUDY.dataset.results, STUDY.dataset.folder)
-    RECORDINGS = layout.find_recordings(
+    FOUND = layout.find_recordings(
         STUDY.dataset.folder, STUDY.dataset.tasks, STUDY.dataset.participants
     )
+    DECISIONS_FILE = SETTINGS.parent / STUDY.dataset.decisions
+    DECISIONS = decisions.read(DECISIONS_FILE, [recording.stem for recording in FOUND])
+    LEFT_OUT = decisions.left_out(DECISIONS)
+    RECORDINGS = decisions.remaining(FOUND, LEFT_OUT)
 except OnbinError as error:
     sys.exit(f"\n{error}\n")
 
@@ -94,6 +99,16 @@ def participants_table():
     """participants.tsv of the dataset, if it has one."""
     path = Path(STUDY.dataset.folder) / "participants.tsv"
     return [str(path)] if path.is_file() else []
+
+
+def decided(kind, recording):
+    """What was decided about a recording's channels or components, and where that stands."""
+    stem = RECORDING[recording].stem
+    return {
+        "decisions": decisions.about(DECISIONS, stem, kind),
+        "decisions_file": str(DECISIONS_FILE),
+        "recording": stem,
+    }
 
 
 def settings_part(*names, **others):

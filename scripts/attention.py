@@ -38,7 +38,9 @@ def _rows(contrast, inputs, settings):
         if row["verdict"] == "kept" and row["condition"] in contrast.attended_in
     ]
     n_samples = min((row["n_samples"] for row in windows), default=1)
-    passband_hz = tagging.passband_end(settings["filter"]["lowpass_hz"], float(rate))
+    passband_hz = tagging.passband_end(
+        settings["filter"]["lowpass_hz"], float(rate), settings["terms"]
+    )
     terms = tagging.retuned(tagging.study_terms(settings["terms"], passband_hz), used.tags)
     harmonics = attention.own_harmonics(terms, contrast.flickering, rate / n_samples)
     starts = [row["start_sample"] for row in windows]

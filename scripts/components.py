@@ -43,7 +43,9 @@ def separate(inputs, outputs, settings):
 def judged(raw, ica, separated, settings):
     """Rows of the table of components, and what is to be said of the labels."""
     chosen = settings["components"]
-    passband_hz = tagging.passband_end(settings["filter"]["lowpass_hz"], raw.info["sfreq"])
+    passband_hz = tagging.passband_end(
+        settings["filter"]["lowpass_hz"], raw.info["sfreq"], settings["terms"]
+    )
     terms = tagging.study_terms(settings["terms"], passband_hz)
     harmonics_hz = [
         [float(term.frequency) for term in terms if term.harmonic and term.tag == tag]

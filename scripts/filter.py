@@ -11,7 +11,7 @@ def filter_recording(inputs, outputs, settings):
     raw = dataset.read_signal(inputs.signal)
     chosen, rate_hz = settings["filter"], raw.info["sfreq"]
     line_hz = chosen["line_hz"] or raw.info["line_freq"]
-    passband_hz = tagging.passband_end(chosen["lowpass_hz"], rate_hz)
+    passband_hz = tagging.passband_end(chosen["lowpass_hz"], rate_hz, settings["terms"])
     terms = tagging.study_terms(settings["terms"], passband_hz)
     chain = filtering.FilterChain.design(
         rate_hz, chosen["highpass_hz"], passband_hz, line_hz, chosen["line_removal"]

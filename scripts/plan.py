@@ -21,7 +21,7 @@ def plan_flicker(inputs, outputs, settings):
     """Plan from settings and metadata; no recording is opened."""
     chosen = settings["dataset"]
     recordings = layout.find_recordings(chosen["folder"], chosen["tasks"], chosen["participants"])
-    recorded = [read_metadata(recording.files) for recording in recordings]
+    recorded = [read_metadata(r.files) for r in recordings if r.name in settings["recordings"]]
     plans = {}
     for setup in plan.setups(settings, recorded):
         refuse(plan.blocking(settings, setup))

@@ -26,7 +26,9 @@ def measure_spectra(inputs, outputs, settings):
         [tables.read_table(path) for path in inputs.flicker],
         tagging.study_tags(settings["terms"]),
     )
-    passband_hz = tagging.passband_end(settings["filter"]["lowpass_hz"], float(rate))
+    passband_hz = tagging.passband_end(
+        settings["filter"]["lowpass_hz"], float(rate), settings["terms"]
+    )
     terms = tagging.study_terms(settings["terms"], passband_hz)
     length_s = shortest / rate
     samples = list(

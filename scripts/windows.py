@@ -27,7 +27,9 @@ def clean_and_cut(inputs, outputs, settings):
 
     flickering = {name: about["flickering"] for name, about in settings["conditions"].items()}
     chosen = settings["windows"]
-    passband_hz = tagging.passband_end(settings["filter"]["lowpass_hz"], float(rate))
+    passband_hz = tagging.passband_end(
+        settings["filter"]["lowpass_hz"], float(rate), settings["terms"]
+    )
     terms = tagging.study_terms(settings["terms"], passband_hz)
     samples = tagging.window_samples(
         tagging.study_tags(settings["terms"]), terms, rate, chosen["length_s"]

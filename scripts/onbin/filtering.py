@@ -11,6 +11,7 @@ from functools import cached_property
 import numpy as np
 
 from onbin.errors import DataError, SettingsError
+from onbin.tagging import ANTIALIAS_PASSBAND
 
 # Transition width times kernel length over sampling rate (Widmann, Schröger & Maess 2015).
 WIDTH_FACTORS = {"hamming": 3.3, "blackman": 5.5}
@@ -121,14 +122,14 @@ def design_lowpass(sfreq_hz: float, edge_hz: float) -> FilterDesign:
 def design_antialias(sfreq_hz: float, factor: int) -> FilterDesign:
     """Design the low-pass that comes before keeping one sample in `factor`.
 
-    Its pass band ends at 0.4 of the new rate and its stop band begins at half the new rate, so
+    Its pass band ends at `tagging.ANTIALIAS_PASSBAND` of the new rate and its stop band begins at half the new rate, so
     that nothing folds back; a Blackman window holds the stop band near -74 dB.
     """
     rate_hz = sfreq_hz / factor
     return FilterDesign(
         kind="anti-alias",
         sfreq_hz=sfreq_hz,
-        edges_hz=(0.4 * rate_hz,),
+        edges_hz=(ANTIALIAS_PASSBAND * rate_hz,),
         transition_hz=0.1 * rate_hz,
         half_amplitude_hz=(0.45 * rate_hz,),
         n_taps=_kernel_length("blackman", sfreq_hz, 0.1 * rate_hz),

@@ -25,13 +25,17 @@ FILES = {
     "intake_signal": "{recording}_desc-intake_eeg.fif",
     "intake_trials": "{recording}_desc-intake_trials.tsv",
     "intake_channels": "{recording}_desc-intake_channels.tsv",
+    "intake_recording": "{recording}_desc-intake_recording.tsv",
     "filter_signal": "{recording}_desc-filtered_eeg.fif",
+    "filter_designs": "{recording}_desc-filtered_designs.tsv",
     "filter_gains": "{recording}_desc-filtered_gains.tsv",
     "sensors_signal": "{recording}_desc-sensors_eeg.fif",
     "sensors_verdicts": "{recording}_desc-sensors_verdicts.tsv",
     "components_ica": "{recording}_desc-components_ica.npz",
-    "components_verdicts": "{recording}_desc-components_verdicts.tsv",
+    "components_evidence": "{recording}_desc-components_evidence.tsv",
+    "components_sheet": "{recording}_desc-components_sheet.png",
     "windows_signal": "{recording}_desc-clean_eeg.fif",
+    "windows_components": "{recording}_desc-components_verdicts.tsv",
     "windows_verdicts": "{recording}_desc-windows_verdicts.tsv",
     "windows_gains": "{recording}_desc-cleaning_gains.tsv",
     "flicker_frequencies": "{recording}_desc-flicker_frequencies.tsv",
@@ -54,6 +58,7 @@ FILES = {
     "study_comparisons": "study/comparisons.tsv",
     "study_participants": "study/participants.tsv",
     "study_group": "study/group_relation.tsv",
+    "draft_decisions": "study/decisions_draft.tsv",
     "report_page": "report.html",
     "report_quality": "study/figures/quality.png",
     "report_bins": "study/figures/bins.png",
@@ -66,6 +71,9 @@ FILES = {
     "describe_readme": "README",
     "describe_ignore": ".bidsignore",
 }
+
+
+ON_TOP = ("manifest_files", "draft_decisions")
 
 
 @dataclass(frozen=True)
@@ -85,6 +93,11 @@ class Recording:
     name: str
     extension: str
     files: tuple[str, ...]
+
+    @property
+    def stem(self) -> str:
+        """File name without _eeg and extension, such as ``sub-01_task-panels``."""
+        return self.name.rsplit("/", 1)[-1]
 
     @property
     def participant(self) -> str:
@@ -117,13 +130,14 @@ def result(results: str, name: str) -> str:
 def names(scope: str) -> list[str]:
     """Names of the files of one scope: ``recording``, ``participant`` or ``study``.
 
-    Those of the study leave out the manifest, which lists all others.
+    Those of the study leave out the manifest, which lists all others, and the draft of decisions,
+    which is made on request.
     """
     of_scope = {
         name: next((s for s in ("recording", "participant") if f"{{{s}}}" in path), "study")
         for name, path in FILES.items()
     }
-    return [n for n, s in of_scope.items() if s == scope and n != "manifest_files"]
+    return [n for n, s in of_scope.items() if s == scope and n not in ON_TOP]
 
 
 def sidecar(path: str | Path) -> str:

@@ -180,7 +180,9 @@ def setups(settings: Mapping, recorded: Iterable[Recorded]) -> list[Setup]:
 
 def passband_hz(settings: Mapping, setup: Setup) -> float:
     """What the filters let pass."""
-    return tagging.passband_end(settings["filter"]["lowpass_hz"], float(setup.working_rate))
+    return tagging.passband_end(
+        settings["filter"]["lowpass_hz"], float(setup.working_rate), settings["terms"]
+    )
 
 
 def measured_terms(settings: Mapping, setup: Setup) -> list[Term]:

@@ -17,7 +17,7 @@ BIDS_VERSION = "1.10.0"
 # What BIDS has no names for yet (spectra, ICA and epochs of EEG derivatives are not settled), and
 # the report.
 IGNORED = (
-    "*.fif", "*_eeg.json", "*_ica.*", "*_trials.*", "*_gains.*", "*_verdicts.*", "*_frequencies.*",
+    "*.fif", "*_eeg.json", "*_ica.*", "*_trials.*", "*_recording.*", "*_designs.*", "*_gains.*", "*_evidence.*", "*_sheet.*", "*_verdicts.*", "*_frequencies.*",
     "*_coefficients.*", "*_psd.*", "*_measures.*", "*_windows.*", "study", "report.*",
     "manifest.*",
 )  # fmt: skip

@@ -58,6 +58,11 @@ class Dataset(Part):
     participants: list[str] = Field(
         [], description="Labels of the participants to take, without sub-; empty takes all."
     )
+    decisions: str = Field(
+        "decisions.tsv",
+        description="What a person decided about recordings, channels and components: a table in "
+        "the folder of the settings. It need not exist.",
+    )
 
 
 class Display(Part):
@@ -151,7 +156,9 @@ class Filter(Part):
         0.5, description="Edge of the high-pass. Higher takes out more drift and slow response."
     )
     lowpass_hz: Positive | None = Field(
-        None, description="Edge of the low-pass; none takes 0.45 of the working rate, at most 100."
+        None,
+        description="Edge of the low-pass; none takes 100, or above the highest term where that is "
+        "higher, at most 0.45 of the working rate.",
     )
     line_hz: Positive | None = Field(
         None, description="Frequency of the mains; none takes what the dataset says."
@@ -167,10 +174,10 @@ class Filter(Part):
 class Intake(Part):
     """How recordings are read."""
 
-    working_rate_hz: Positive = Field(
-        250.0,
+    working_rate_hz: Positive | None = Field(
+        None,
         description="Recordings are decimated by the largest whole factor that keeps at least "
-        "this rate.",
+        "this rate; none takes 250, or more where the terms or the low-pass need it.",
     )
 
 
@@ -436,6 +443,9 @@ def part(settings: Settings, *names: str) -> dict[str, Any]:
         "harmonics": settings.response.harmonics,
         "intermodulation_order": settings.response.intermodulation_order,
     }
+    whole["intake"]["working_rate_hz"] = tagging.least_rate(
+        settings.intake.working_rate_hz, settings.filter.lowpass_hz, whole["terms"]
+    )
     whole["planned"] = [  # in the order of the settings, which mapping keys lose
         {"name": name, **whole["comparisons"][name]} for name in settings.comparisons
     ]

@@ -45,7 +45,14 @@ def read_table(path: str | Path) -> list[dict[str, Any]]:
 
 
 def read_foreign(path: str | Path) -> list[dict[str, str]]:
-    """Read a table of a dataset as text: any line ends, a byte-order mark, n/a as it stands.
+    """Read a table that is not ours as text, see `read_numbered`."""
+    return [row for _, row in read_numbered(path)]
+
+
+def read_numbered(path: str | Path) -> list[tuple[int, dict[str, str]]]:
+    """Read a table that is not ours as text, each row with its line in the file.
+
+    Any line ends, a byte-order mark and empty lines are taken; n/a stays as it stands.
 
     Raises
     ------
@@ -69,7 +76,7 @@ def read_foreign(path: str | Path) -> list[dict[str, str]]:
                 f"{path}, line {number}: found {len(cells)} cells, expected {len(header)} as in "
                 f"the header; cells are parted by tabs."
             )
-        rows.append(dict(zip(header, cells, strict=True)))
+        rows.append((number, dict(zip(header, cells, strict=True))))
     return rows
 
 

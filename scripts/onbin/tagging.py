@@ -6,8 +6,11 @@ Nothing here is rounded: a tag of 10 frames on a 144 Hz display is 72/5 Hz until
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, replace
 from fractions import Fraction
-from math import gcd, lcm
+from math import ceil, gcd, lcm
 
+USUAL_RATE_HZ = 250.0  # components are labelled by networks trained at this rate and above
+USUAL_PASSBAND_HZ = 100.0  # holds the muscle band, by which components and windows are judged
+ANTIALIAS_PASSBAND = 0.4  # end of what decimation lets pass, over the rate that it leaves
 RATE_DENOMINATOR = 1000  # sampling rates are ratios of small integers: 1000/3, 512, 2048, ...
 
 
@@ -139,9 +142,26 @@ def study_tags(settings: Mapping) -> dict[str, Fraction]:
     return {name: Fraction(ratio) for name, ratio in settings["tags"]}
 
 
-def passband_end(lowpass_hz: float | None, rate_hz: float) -> float:
-    """Edge of the low-pass in Hz: as set, else 0.45 of the sampling rate, at most 100."""
-    return lowpass_hz or min(100.0, 0.45 * rate_hz)
+def passband_end(lowpass_hz: float | None, rate_hz: float, terms: Mapping) -> float:
+    """Edge of the low-pass in Hz.
+
+    As set, else 100 or above the highest term where that is higher, at most 0.45 of the rate.
+    """
+    return lowpass_hz or min(_wanted_hz(terms), 0.45 * rate_hz)
+
+
+def least_rate(working_rate_hz: float | None, lowpass_hz: float | None, terms: Mapping) -> float:
+    """Least working rate in Hz: as set, else so high that the pass band ends at 0.4 of it."""
+    return working_rate_hz or max(
+        USUAL_RATE_HZ, (lowpass_hz or _wanted_hz(terms)) / ANTIALIAS_PASSBAND
+    )
+
+
+def _wanted_hz(terms: Mapping) -> float:
+    """End of a pass band that holds every term that is asked for."""
+    fastest = max(study_tags(terms).values(), default=Fraction(0))
+    most = max(terms["harmonics"], terms["intermodulation_order"])
+    return max(USUAL_PASSBAND_HZ, float(ceil(fastest * most) + 1))
 
 
 def whole_cycle_samples(frequencies: Iterable[Fraction], rate: Fraction) -> int:
