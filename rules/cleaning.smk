@@ -4,8 +4,9 @@
 rule filter:
     input:
         signal=result("intake_signal"),
+        recording=result("intake_recording"),
     output:
-        **made("filter", "signal", "gains"),
+        **made("filter", "signal", "designs", "gains"),
     log:
         log_of("filter", "{recording}"),
     benchmark:
@@ -38,7 +39,9 @@ rule sensors:
         mem_mb=1500,
         runtime=30,
     params:
-        settings=settings_part("sensors.reference", "seed"),
+        settings=lambda wildcards: settings_part(
+            "sensors.reference", "seed", **decided("channel", wildcards.recording)
+        ),
         code=code("sensors"),
     message:
         "sensors: judging the channels of {wildcards.recording}"
@@ -51,7 +54,7 @@ rule components:
         signal=result("sensors_signal"),
         sensors=result("sensors_verdicts"),
     output:
-        **made("components", "ica", "verdicts"),
+        **made("components", "ica", "evidence", "sheet"),
     log:
         log_of("components", "{recording}"),
     benchmark:
@@ -61,8 +64,13 @@ rule components:
         mem_mb=1500,
         runtime=60,
     params:
-        settings=settings_part(
-            "components", "sensors.reference", "filter.lowpass_hz", "terms", "seed"
+        settings=lambda wildcards: settings_part(
+            "components.method",
+            "sensors.reference",
+            "filter.lowpass_hz",
+            "terms",
+            "seed",
+            recording=RECORDING[wildcards.recording].stem,
         ),
         code=code("components"),
     message:
@@ -74,11 +82,12 @@ rule components:
 rule windows:
     input:
         signal=result("sensors_signal"),
+        sensors=result("sensors_verdicts"),
         ica=result("components_ica"),
-        components=result("components_verdicts"),
         trials=result("intake_trials"),
+        gains=result("filter_gains"),
     output:
-        **made("windows", "signal", "verdicts", "gains"),
+        **made("windows", "signal", "components", "verdicts", "gains"),
     log:
         log_of("windows", "{recording}"),
     benchmark:
@@ -88,11 +97,15 @@ rule windows:
         mem_mb=1500,
         runtime=30,
     params:
-        settings=settings_part(
+        settings=lambda wildcards: settings_part(
             "windows",
+            "components.remove",
+            "components.max_tag_share",
+            "sensors.reference",
             "filter.lowpass_hz",
             "terms",
             "conditions.*.flickering",
+            **decided("component", wildcards.recording),
         ),
         code=code("windows"),
     message:

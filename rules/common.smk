@@ -28,7 +28,7 @@ try:
     FOUND = layout.find_recordings(
         STUDY.dataset.folder, STUDY.dataset.tasks, STUDY.dataset.participants
     )
-    DECISIONS_FILE = SETTINGS.parent / STUDY.dataset.decisions
+    DECISIONS_FILE = os.path.relpath(SETTINGS.parent / STUDY.dataset.decisions)
     DECISIONS = decisions.read(DECISIONS_FILE, [recording.stem for recording in FOUND])
     LEFT_OUT = decisions.left_out(DECISIONS)
     RECORDINGS = decisions.remaining(FOUND, LEFT_OUT)
@@ -68,6 +68,15 @@ def recordings_of(participant):
     return [r.name for r in RECORDINGS if r.participant == participant]
 
 
+def left_out_by_participant():
+    """Why recordings are left out, by participant and name."""
+    why = {who: {} for who in {r.participant for r in FOUND if r.stem in LEFT_OUT}}
+    for recording in FOUND:
+        if recording.stem in LEFT_OUT:
+            why[recording.participant][recording.name] = LEFT_OUT[recording.stem]
+    return {who: why[who] for who in sorted(why)}
+
+
 def of_all_recordings(name):
     return [result(name).format(recording=recording.name) for recording in RECORDINGS]
 
@@ -104,9 +113,10 @@ def participants_table():
 def decided(kind, recording):
     """What was decided about a recording's channels or components, and where that stands."""
     stem = RECORDING[recording].stem
+    chosen = decisions.about(DECISIONS, stem, kind)
     return {
-        "decisions": decisions.about(DECISIONS, stem, kind),
-        "decisions_file": str(DECISIONS_FILE),
+        "decisions": chosen,
+        "decisions_file": DECISIONS_FILE if chosen else None,
         "recording": stem,
     }
 

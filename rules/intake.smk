@@ -5,7 +5,7 @@ rule intake:
     input:
         files=lambda wildcards: list(RECORDING[wildcards.recording].files),
     output:
-        **made("intake", "signal", "trials", "channels"),
+        **made("intake", "signal", "trials", "channels", "recording"),
     log:
         log_of("intake", "{recording}"),
     benchmark:
@@ -16,7 +16,7 @@ rule intake:
         runtime=30,
     params:
         settings=lambda wildcards: settings_part(
-            "intake",
+            "least_rate_hz",
             "flicker.photodiode",
             "conditions.*.events",
             "conditions.*.duration_s",

@@ -17,9 +17,10 @@ rule report:
         coefficients=of_all_participants("spectra_coefficients"),
         psd=of_all_participants("spectra_psd"),
         channels=of_all_recordings("intake_channels"),
+        designs=of_all_recordings("filter_designs"),
         gains=of_all_recordings("filter_gains"),
         sensors=of_all_recordings("sensors_verdicts"),
-        components=of_all_recordings("components_verdicts"),
+        components=of_all_recordings("windows_components"),
         windows=of_all_recordings("windows_verdicts"),
         cleaning=of_all_recordings("windows_gains"),
         signal=of_all_recordings("windows_signal")[0],
@@ -43,7 +44,13 @@ rule report:
         mem_mb=2000,
         runtime=30,
     params:
-        settings=settings_part(*type(STUDY).model_fields, "terms"),
+        settings=settings_part(
+            *type(STUDY).model_fields,
+            "terms",
+            "least_rate_hz",
+            decisions=[decisions.row(decision) for decision in DECISIONS],
+            left_out=left_out_by_participant(),
+        ),
         code=code("report"),
     message:
         "report: writing the pages"

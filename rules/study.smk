@@ -5,7 +5,7 @@ rule study:
     input:
         people=participants_table(),
         sensors=of_all_recordings("sensors_verdicts"),
-        components=of_all_recordings("components_verdicts"),
+        components=of_all_recordings("windows_components"),
         windows=of_all_recordings("windows_verdicts"),
         flicker=of_all_recordings("flicker_frequencies"),
         responses=of_all_participants("response_measures"),
@@ -40,14 +40,40 @@ rule study:
             "conditions.*.flickering",
             "planned",
             "seed",
-            recordings=[recording.name for recording in RECORDINGS],
+            "dataset.participants",
+            folders=layout.participant_folders(STUDY.dataset.folder),
+            left_out=left_out_by_participant(),
             participants={who: recordings_of(who) for who in PARTICIPANTS},
+            recordings=[recording.name for recording in RECORDINGS],
+            trusted=decisions.trusted(DECISIONS, RECORDINGS),
         ),
         code=code("study"),
     message:
         "study: bringing everybody together"
     script:
         "../scripts/study.py"
+
+
+rule draft:
+    input:
+        participants=result("study_participants"),
+        sensors=of_all_recordings("sensors_verdicts"),
+        components=of_all_recordings("windows_components"),
+    output:
+        **made("draft", "decisions"),
+    log:
+        log_of("draft"),
+    localrule: True
+    params:
+        settings=settings_part(
+            decisions=[decisions.row(decision) for decision in DECISIONS],
+            recordings=[recording.stem for recording in RECORDINGS],
+        ),
+        code=code("draft"),
+    message:
+        "draft: what could be decided, in {output.decisions}"
+    script:
+        "../scripts/draft.py"
 
 
 rule describe:

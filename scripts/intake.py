@@ -12,7 +12,7 @@ def intake(inputs, outputs, settings):
     raw = dataset.read_recording(settings["folder"], recording, settings["extension"])
     channels = dataset.choose_channels(raw, settings["flicker"]["photodiode"])
     rate = tagging.exact_rate(raw.info["sfreq"])
-    least = tagging.exact(settings["intake"]["working_rate_hz"])
+    least = tagging.exact(settings["least_rate_hz"])
     factor = tagging.decimation_factor(rate, least)
 
     data_uv = filtering.decimate(
@@ -32,6 +32,18 @@ def intake(inputs, outputs, settings):
 
     dataset.write_signal(working, outputs.signal)
     tables.write_table(outputs.trials, trials, ["trial", "condition", "onset_s", "duration_s"])
+    tables.write_table(
+        outputs.recording,
+        [
+            {
+                "recorded_rate_hz": float(rate),
+                "decimation_factor": factor,
+                "working_rate_hz": float(rate / factor),
+                "recorded_s": raw.n_times / float(rate),
+            }
+        ],
+        ["recorded_rate_hz", "decimation_factor", "working_rate_hz", "recorded_s"],
+    )
     tables.write_table(outputs.channels, channels, ["name", "type", "units", "status", "position"])
 
 

@@ -56,9 +56,8 @@ def filter_gains(settings, setup):
         chosen["line_removal"],
     )
     gains = abs(chain.gains(frequencies_hz))
-    if setup.factor > 1:
-        antialias = filtering.design_antialias(float(setup.recorded_rate), setup.factor)
-        gains = gains * antialias.gain(frequencies_hz)
+    for design in filtering.antialias(float(setup.recorded_rate or 0), setup.factor):
+        gains = gains * design.gain(frequencies_hz)
     return dict(zip(terms, gains.tolist(), strict=True))
 
 

@@ -2,7 +2,8 @@
 
 from pathlib import Path
 
-from onbin import figures, report, report_tables
+from onbin import report, report_tables
+from onbin.drawing import save
 from onbin.runner import run
 
 
@@ -11,7 +12,7 @@ def write_report(inputs, outputs, settings):
     material = report_tables.read(inputs, settings)
     drawings = report.draw(material)
     for name, drawing in drawings.items():
-        figures.save(drawing.figure, getattr(outputs, name))
+        save(drawing.figure, getattr(outputs, name))
     images = {name: Path(getattr(outputs, name)).read_bytes() for name in drawings}
     Path(outputs.page).write_text(report.page(material, drawings, images), encoding="utf-8")
 

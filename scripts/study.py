@@ -6,7 +6,7 @@ from onbin import study_tables, tables
 from onbin.runner import run
 
 PARTICIPANTS = [
-    "participant", "in_study", "reason", "recordings", "channels_total", "channels_bad",
+    "participant", "in_study", "reason", "recordings", "left_out", "channels_total", "channels_bad",
     "components_removed", "windows_placed", "windows_kept", "fewest_windows", "fewest_condition",
     "measured_tags",
 ]  # fmt: skip
@@ -32,14 +32,18 @@ def make_study(inputs, outputs, settings):
         name: settings["trust"]["min_windows" if about["flickering"] else "min_rest_windows"]
         for name, about in settings["conditions"].items()
     }
+    people = _people(inputs)
+    everybody = {who: [] for who in _expected(people, settings)} | settings["participants"]
     participants = [
         study_tables.participant_row(
             participant,
             **{name: {r: of_all[r] for r in recordings} for name, of_all in verdicts.items()},
             max_bad_share=settings["sensors"]["max_bad_share"],
             min_windows=fewest,
+            trusted=settings["trusted"],
+            left_out=settings["left_out"].get(participant, {}),
         )
-        for participant, recordings in settings["participants"].items()
+        for participant, recordings in sorted(everybody.items())
     ]
     flicker = [
         {"recording": recording, **row}
@@ -61,7 +65,10 @@ def make_study(inputs, outputs, settings):
 
     tables.write_table(
         outputs.participants,
-        (row | {"measured_tags": ", ".join(measured[row["participant"]])} for row in participants),
+        (
+            row | {"measured_tags": ", ".join(measured.get(row["participant"], ()))}
+            for row in participants
+        ),
         PARTICIPANTS,
     )
     columns = ["recording", *tables.header(inputs.flicker[0])]
@@ -76,12 +83,19 @@ def make_study(inputs, outputs, settings):
         participant, *others = tables.header(first)
         tables.write_table(path, marked, [participant, "in_study", *others])
     comparisons = study_tables.comparison_rows(
-        settings["planned"], responses, alphas, _people(inputs), in_study, settings["seed"]
+        settings["planned"], responses, alphas, people, in_study, settings["seed"]
     )
     comparisons = study_tables.mark_measured(comparisons, settings["planned"], measured)
     tables.write_table(outputs.comparisons, comparisons, COMPARISONS)
     group = study_tables.group_rows(relations, windows, in_study, settings["seed"])
     tables.write_table(outputs.group, group, GROUP)
+
+
+def _expected(people, settings):
+    """Participants that the dataset names in its table or by a folder, among those taken."""
+    named = {*people, *settings["folders"]}
+    taken = {f"sub-{label}" for label in settings["dataset"]["participants"]}
+    return named & taken if taken else named
 
 
 def _people(inputs):

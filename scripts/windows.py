@@ -1,29 +1,53 @@
 """Remove components, cut trials into windows, judge each, and see that the response survived."""
 
-from onbin import arrays, components, dataset, tables, tagging, windows, windows_tables
+from onbin import (
+    arrays,
+    components,
+    dataset,
+    decisions,
+    sensors,
+    tables,
+    tagging,
+    windows,
+    windows_tables,
+)
 from onbin.runner import run
 
+COMPONENTS = [
+    "component", "peak_channel", "verdict", "reason", "component_class", "probability",
+    "variance_share", "tag_share", "flagged",
+]  # fmt: skip
 VERDICTS = [
     "window", "trial", "condition", "index_in_trial", "start_sample", "n_samples", "offset_s",
     "verdict", "reason", "peak_to_peak_uv", "peak_to_peak_limit_uv", "gradient_uv_per_ms",
     "gradient_limit_uv_per_ms", "muscle_uv", "muscle_limit_uv", "flat_uv",
 ]  # fmt: skip
-GAINS = ["tag", "term", "frequency_hz", "site", "gain", "peak_gain", "topography_correlation"]
+GAINS = [
+    "tag", "term", "frequency_hz", "site", "filter_gain", "gain", "peak_gain",
+    "topography_correlation",
+]  # fmt: skip
 
 
 def clean_and_cut(inputs, outputs, settings):
     """Clean a recording and place its windows."""
-    raw = dataset.read_signal(inputs.signal)
+    raw = dataset.open_signal(inputs.signal)
     rate = tagging.exact_rate(raw.info["sfreq"])
-    separated = components.Separation(**arrays.read(inputs.ica))
-    removed = {
-        row["component"]: row["component_class"]
-        for row in tables.read_table(inputs.components)
-        if row["verdict"] == components.REMOVED
-    }
+    evidence = components.Evidence.of(arrays.read(inputs.ica))
+    separated = evidence.separation
+    judged = evidence.judge(
+        components.ComponentLimits(
+            settings["components"]["remove"], settings["components"]["max_tag_share"]
+        ),
+        decisions.by_item(
+            settings["decisions"],
+            separated.items,
+            settings["decisions_file"],
+            settings["recording"],
+        ),
+    )
+    removed = {v.component: v.label for v in judged if v.verdict == components.REMOVED}
     before_uv = dataset.eeg_uv(raw)
     clean_uv, gates = components.remove_components(before_uv, separated, removed, float(rate))
-    clean = dataset.with_eeg(raw, clean_uv)
 
     flickering = {name: about["flickering"] for name, about in settings["conditions"].items()}
     chosen = settings["windows"]
@@ -38,7 +62,7 @@ def clean_and_cut(inputs, outputs, settings):
     placed, unplaced = windows.place_windows(
         trials,
         float(rate),
-        clean.n_times,
+        raw.n_times,
         windows_tables.samples_by_condition(
             flickering, samples, rate, chosen["length_s"], chosen["rest_length_s"]
         ),
@@ -49,13 +73,22 @@ def clean_and_cut(inputs, outputs, settings):
         placed,
         float(rate),
         windows.WindowLimits(peak_to_peak_uv=tuple(chosen["peak_to_peak_uv"])),
-        dataset.bad_spans(clean),
+        dataset.bad_spans(raw),
         [float(term.frequency) for term in terms],
     )
+    names = dataset.eeg_names(raw)
+    good = [r["name"] for r in tables.read_table(inputs.sensors) if r["verdict"] == sensors.GOOD]
     survival = windows_tables.survival_rows(
         before_uv,
-        dataset.eeg_names(raw),
-        lambda open_share: separated.removal(removed, open_share),
+        names,
+        windows_tables.Chain(
+            good=[names.index(name) for name in good],
+            average_reference=settings["sensors"]["reference"] == "average",
+            removal=lambda open_share: separated.removal(removed, open_share),
+            filter_gains={
+                (row["tag"], row["term"]): row["gain"] for row in tables.read_table(inputs.gains)
+            },
+        ),
         gates,
         [v.window for v in verdicts if v.verdict == windows.KEPT],
         terms,
@@ -64,7 +97,15 @@ def clean_and_cut(inputs, outputs, settings):
         flickering,
     )
 
-    dataset.write_signal(clean, outputs.signal)
+    del before_uv
+    raw.load_data(verbose="error")
+    dataset.put_eeg(raw, clean_uv)
+    dataset.write_signal(raw, outputs.signal)
+    tables.write_table(
+        outputs.components,
+        [v.row(peak) for v, peak in zip(judged, separated.peak_channels, strict=True)],
+        COMPONENTS,
+    )
     rows = windows_tables.verdict_rows(verdicts, unplaced, trials)
     tables.write_table(outputs.verdicts, rows, VERDICTS)
     tables.write_table(outputs.gains, survival, GAINS)

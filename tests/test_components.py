@@ -270,7 +270,7 @@ def test_variance_shares_of_known_sources():
         ({"eye": 0.89}, 0.0, "kept", False, "no class to remove is likely enough"),
         ({"brain": 0.99}, 0.9, "kept", False, "no class to remove is likely enough"),
         ({"line noise": 0.99}, 0.0, "kept", False, "no class to remove is likely enough"),
-        ({"muscle": 0.95}, 0.3, "kept", True, "muscle with probability 0.95, but carries 30%"),
+        ({"muscle": 0.95}, 0.3, "kept", True, "muscle with probability 0.95, but carries 30 %"),
         ({"muscle": 0.95}, 0.1, "removed", False, "muscle with probability 0.95"),
     ],
 )

@@ -1,7 +1,7 @@
 import mne
 import numpy as np
 import pytest
-from onbin import figures
+from onbin import drawing, figures
 
 CONDITIONS = ["watch_left", "rest"]
 
@@ -51,7 +51,7 @@ def people_rows(people):
 
 def test_same_figure_has_the_same_bytes(tmp_path):
     for name in ("first", "second"):
-        figures.save(figures.note("nothing to draw"), tmp_path / f"{name}.png")
+        drawing.save(figures.note("nothing to draw"), tmp_path / f"{name}.png")
     first, second = ((tmp_path / f"{n}.png").read_bytes() for n in ("first", "second"))
     assert first == second
     assert b"tEXt" not in first  # neither date nor version of a library
@@ -67,10 +67,10 @@ def test_quality_has_a_row_for_everybody(people, tmp_path):
         assert "sub-1 (set aside)" in shown
         assert "3/20 !" in shown  # fewer than the four asked for
         assert "none" in shown  # no window of the other condition
-    figures.save(figure, tmp_path / "quality.png")
+    drawing.save(figure, tmp_path / "quality.png")
     width, height = png_size(tmp_path / "quality.png")
-    assert width == round(figures.WIDTH_IN * figures.RESOLUTION_DPI)
-    assert height / people > 0.2 * figures.RESOLUTION_DPI  # room for a line of text each
+    assert width == round(drawing.WIDTH_IN * drawing.RESOLUTION_DPI)
+    assert height / people > 0.2 * drawing.RESOLUTION_DPI  # room for a line of text each
 
 
 def test_responses_show_everybody_and_the_mean_of_the_study():

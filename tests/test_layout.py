@@ -190,9 +190,9 @@ def test_paths_of_results():
     assert layout.benchmark("out", "alpha", "sub-1") == "out/logs/alpha/sub-1.benchmark.tsv"
 
 
-def test_scopes_share_out_all_files_but_the_manifest():
+def test_scopes_share_out_all_files_but_the_manifest_and_the_draft():
     scopes = {scope: layout.names(scope) for scope in ("recording", "participant", "study")}
-    assert sorted(sum(scopes.values(), ["manifest_files"])) == sorted(layout.FILES)
+    assert sorted(sum(scopes.values(), list(layout.ON_TOP))) == sorted(layout.FILES)
     assert all("{recording}" in layout.FILES[name] for name in scopes["recording"])
     assert all("{" not in layout.FILES[name] for name in scopes["study"])
 

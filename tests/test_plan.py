@@ -11,7 +11,7 @@ from types import SimpleNamespace
 import plan as script
 import pytest
 import yaml
-from onbin import filtering, layout, plan, plan_page, response_tables, tables, tagging
+from onbin import layout, plan, plan_page, response_tables, tables, tagging
 from onbin.errors import DataError, SettingsError
 from onbin.plan import Recorded, Setup
 from onbin.settings import load_settings, part
@@ -106,7 +106,6 @@ def test_nearest_to_13_hz_at_60_hz():
         (study(length_s=1, a=15, b=15.5), "windows.length_s", "fall in one bin",
          "at least 2 s is needed"),
         (study(a=15, b="30/2"), "tags.b", "cannot be told apart", "another frequency"),
-        (study(a=120), "filter.lowpass_hz", "ends at 100 Hz and takes out a", "set it above"),
         (study(line_hz=50, a=50), "tags.a", "taken out with the mains at 50 Hz",
          "another frequency"),
         (study(line_hz=50, line_removal="notch", a=25), "response.harmonics",
@@ -122,6 +121,34 @@ def test_a_plan_that_cannot_work_stops_before_the_run(load, raw, key, found, adv
     line = next(line for line in str(caught.value).splitlines() if f" {key}: " in line)
     assert found in line
     assert advice in line
+
+
+def test_a_tag_above_the_low_pass(load):
+    raw = study(a=120)
+    raw["filter"]["lowpass_hz"] = 100
+    with pytest.raises(SettingsError, match=r"ends at 100 Hz and takes out a.*set it above"):
+        load(raw)
+
+
+@pytest.mark.parametrize(
+    ("tag_hz", "lowpass_hz", "passband_hz", "rate_hz"),
+    [
+        (15, None, 100, 250),  # 3 harmonics: 45 Hz
+        (40, None, 121, 302.5),  # 120 Hz, and 0.4 of the rate
+        (15, 120, 120, 300),
+        (15, 40, 40, 250),
+    ],
+)
+def test_the_working_rate_follows_from_the_terms_and_the_low_pass(
+    load, tag_hz, lowpass_hz, passband_hz, rate_hz
+):
+    raw = study(a=tag_hz)
+    raw["filter"]["lowpass_hz"] = lowpass_hz
+    settings = load(raw)
+    assert settings["least_rate_hz"] == rate_hz
+    assert plan.passband_hz(settings, plan.assumed_setup(settings)) == passband_hz
+    highest = max(term.frequency for term in plan.measured_terms(settings, Setup(rate_hz, None)))
+    assert highest <= 0.4 * rate_hz
 
 
 def test_a_tag_above_what_the_working_rate_shows(load):
@@ -141,7 +168,7 @@ def test_a_tag_above_what_the_recordings_show(load):
 
 def test_the_mains_of_the_dataset_count_where_the_settings_are_silent(load):
     settings = load(study(a=12.5, b=50.2, line_removal="fit"))
-    (stop,) = plan.blocking(settings, Setup(Fraction(250), 50.0))
+    stop = next(plan.blocking(settings, Setup(Fraction(250), 50.0)))
     assert "b 1f (50.2 Hz) would be taken out" in stop.found
     kept = load(study(a=12.5, b=50.2, line_removal="none"))
     assert list(plan.blocking(kept, Setup(Fraction(250), 50.0))) == []
@@ -152,8 +179,13 @@ def test_tags_that_never_flicker_together_may_share_a_frequency(load):
     assert settings["terms"]["tags"] == [["a", "15"], ["b", "15"]]
 
 
-def test_the_reach_of_line_removal_is_that_of_the_step_filter():
-    assert float(plan.LINE_REACH_HZ) == filtering.LINE_REACH_HZ
+def test_a_notch_gives_way_to_a_fit_where_that_spares_the_term(load):
+    notched = load(study(a=12.5, b=51, line_removal="notch"))
+    stop = next(plan.blocking(notched, Setup(Fraction(250), 50.0)))
+    assert "b 1f (51 Hz) would be taken out" in stop.found
+    assert "set filter.line_removal: fit" in stop.advice
+    fitted = load(study(a=12.5, b=51, line_removal="fit"))
+    assert list(plan.blocking(fitted, Setup(Fraction(250), 50.0))) == []
 
 
 def test_terms_that_the_filters_change_stop_the_run(load):
@@ -167,7 +199,7 @@ def test_terms_that_the_filters_change_stop_the_run(load):
 def test_gains_hold_the_decimation_too(load):
     # the pass band of the filter before decimation ends at 0.4 of the new rate
     settings = load(study(a=15.5, length_s=4))
-    settings["intake"]["working_rate_hz"] = 100.0
+    settings["least_rate_hz"] = 100.0
     setup = Setup(Fraction(100), None, Fraction(1000), 1)
     gains = {plan.label(t): g for t, g in script.filter_gains(settings, setup).items()}
     assert gains["a 2f"] == pytest.approx(1, abs=0.01)
@@ -302,7 +334,9 @@ def test_a_reversing_pattern_needs_its_second_harmonic(load):
 
 
 def test_what_is_lost_or_unused_is_told(load):
-    text = told(load(study(a=40, b=11, conditions={"x": ["a"]})))
+    raw = study(a=40, b=11, conditions={"x": ["a"]})
+    raw["filter"]["lowpass_hz"] = 100
+    text = told(load(raw))
     assert "b flickers in no condition" in text
     assert "beyond the filters (from 100 Hz on), so not measured: a 3f (120 Hz)" in text
 
@@ -358,7 +392,8 @@ def run_plan(settings, folder, out):
     out.mkdir()
     outputs = SimpleNamespace(terms=out / "plan.tsv", page=out / "plan.txt")
     chosen = {"folder": str(folder), "tasks": [], "participants": []}
-    script.plan_flicker(None, outputs, settings | {"dataset": chosen})
+    names = [recording.name for recording in layout.find_recordings(folder)]
+    script.plan_flicker(None, outputs, settings | {"dataset": chosen, "recordings": names})
     return tables.read_table(outputs.terms), outputs.page.read_text(encoding="utf-8")
 
 

@@ -6,6 +6,7 @@ from itertools import pairwise
 from types import SimpleNamespace
 
 import attention as attention_step
+import filter as filter_step
 import flicker as flicker_step
 import mne
 import numpy as np
@@ -14,7 +15,7 @@ import relation as relation_step
 import report as report_step
 import response as response_step
 import study as study_step
-from onbin import arrays, dataset, report, report_tables, tables, tagging
+from onbin import arrays, dataset, filtering, report, report_tables, tables, tagging
 from onbin.settings import Settings, load_settings, part
 
 CHANNELS = ["Oz", "O1", "O2", "POz", "PO3", "PO4", "Pz", "Cz", "Fz", "C3", "C4", "P7"]
@@ -91,12 +92,13 @@ class Study:
         self.folder, self.settings = folder, settings
         self.channels = CHANNELS[:channels]
         self.rng = np.random.default_rng(7)
-        self.whole = part(settings, *Settings.model_fields, "terms")
+        self.whole = part(settings, *Settings.model_fields, "terms", "least_rate_hz")
+        self.whole |= {"decisions": [], "left_out": {}}
         self.names = [f"sub-{number:02}" for number in range(1, people + 1)]
         self.inputs = SimpleNamespace(
             coefficients=[], psd=[], relation_windows=[], responses=[], alphas=[], relations=[],
-            people=[], flicker=[], channels=[], gains=[], sensors=[], components=[], windows=[],
-            cleaning=[], attentions=[], plan_page=str(folder / "flicker_plan.txt"),
+            people=[], flicker=[], channels=[], designs=[], gains=[], sensors=[],
+            components=[], windows=[], cleaning=[], attentions=[], plan_page=str(folder / "flicker_plan.txt"),
         )  # fmt: skip
         (folder / "flicker_plan.txt").write_text("The plan can work as it stands.\n")
         for number, who in enumerate(self.names):
@@ -138,10 +140,11 @@ class Study:
                     "name": name,
                     "verdict": "bad" if index < few else "good",
                     "reason": "flat" if index < few else None,
+                    "status": "bad" if index == len(self.channels) - 1 else "good",
                 }
                 for index, name in enumerate(self.channels)
             ],
-            ["name", "verdict", "reason"],
+            ["name", "verdict", "reason", "status"],
         )
         classes = [("eye", "removed", None), ("brain", "kept", None), ("eye", "kept", "tag <1f>")]
         self._write(
@@ -208,7 +211,10 @@ class Study:
         self._write("attentions", who, [told] if found else [], attention_step.MEASURES)
         columns = ["tag", "term", "frequency_hz", "gain"]
         self._write("gains", who, gains, columns)
-        self._write("cleaning", who, gains, [*columns, "topography_correlation"])
+        cleaning = [row | {"peak_gain": row["gain"]} for row in gains]
+        self._write("cleaning", who, cleaning, [*columns, "peak_gain", "topography_correlation"])
+        designs = [filtering.design_row(filtering.design_highpass(RATE_HZ, 0.5))]
+        self._write("designs", who, designs, filter_step.DESIGNS)
 
     def _participant(self, who, present):
         condition = np.repeat(present, 8)
@@ -315,7 +321,13 @@ class Study:
             outputs,
             self.whole
             | part(self.settings, "planned")
-            | {"participants": recordings, "recordings": [r for (r,) in recordings.values()]},
+            | {
+                "participants": recordings,
+                "recordings": [r for (r,) in recordings.values()],
+                "folders": self.names,
+                "left_out": {},
+                "trusted": {},
+            },
         )
         vars(self.inputs).update(vars(outputs))
         info = mne.create_info(self.channels, RATE_HZ, "eeg")
@@ -370,7 +382,7 @@ def test_page_needs_no_other_file_and_no_script(usual):
     assert all(source.startswith("data:image/png;base64,") for source in page.all("img", "src"))
     assert not {"script", "link", "iframe", "object"} & {tag for tag, _ in page.elements}
     links = page.all("a", "href")
-    ours = re.compile(r"#[a-z]+|study/[a-z/_]+\.(tsv|png|txt)|manifest\.tsv")
+    ours = re.compile(r"#[a-z]+|study/[a-z/_]+\.(tsv|png|txt)|manifest\.tsv|sub-[\w/-]+_sheet\.png")
     assert all(ours.fullmatch(link) for link in links)
     assert "url(" not in usual[1]
     assert "@import" not in usual[1]
@@ -412,7 +424,7 @@ def test_nothing_is_silently_dropped(usual):
     words = Page(usual[1]).words
     assert "In the study (5 of 6): sub-01, sub-02, sub-03, sub-05 and sub-06." in words
     assert "sub-04: sub-04/eeg/sub-04_task-x: 3 of 6 channels are bad, more than 25%" in words
-    assert "1 of 6: Oz (flat)" in words
+    assert "PO4 1 of 6: Oz: flat" in words  # bad in the dataset; found bad
     assert "gradient 3, muscle 3" in words  # a window with two reasons counts under each
     assert "not there" in words  # the condition that sub-05 lacks
 

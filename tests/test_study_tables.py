@@ -29,6 +29,8 @@ def participant(**changes):
         "windows": {A: windows("left", 6, 1) + windows("rest", 3), B: windows("left", 4)},
         "max_bad_share": 0.1,
         "min_windows": FEWEST,
+        "trusted": {},
+        "left_out": {},
     }
     return participant_row("sub-1", **usual | changes)
 
@@ -39,6 +41,7 @@ def test_a_participant_in_the_study():
         "in_study": True,
         "reason": None,
         "recordings": 2,
+        "left_out": None,
         "channels_total": 19,
         "channels_bad": 2,
         "components_removed": 3,
@@ -59,6 +62,29 @@ def test_every_reason_to_set_aside_is_told():
         f"{A}: 3 of 20 channels are bad, more than 10%; "
         "left: 9 windows kept, fewer than 10; rest: 2 windows kept, fewer than 3"
     )
+
+
+def test_recordings_that_a_person_keeps_are_not_held_against_anybody():
+    poor = {
+        "sensors": {A: verdicts(good=17, bad=3), B: verdicts(good=20)},
+        "windows": {A: windows("left", 9, 5), B: windows("rest", 2)},
+    }
+    one = participant(**poor, trusted={A: "seen (decided by RK)"})
+    assert one["reason"] == (
+        "left: 9 windows kept, fewer than 10; rest: 2 windows kept, fewer than 3"
+    )
+    assert participant(**poor, trusted={A: "seen", B: "seen"})["in_study"] is True
+
+
+def test_left_out_recordings_are_named_and_a_participant_may_have_no_other():
+    told = {B: "fell asleep (decided by RK)"}
+    row = participant(left_out=told)
+    assert (row["in_study"], row["left_out"]) == (True, f"{B}: fell asleep (decided by RK)")
+    nothing = {"sensors": {}, "components": {}, "windows": {}}
+    row = participant(**nothing, left_out=told)
+    assert (row["in_study"], row["recordings"]) == (False, 0)
+    assert row["reason"] == row["left_out"] == f"{B}: fell asleep (decided by RK)"
+    assert participant(**nothing)["reason"] == study_tables.NO_RECORDING
 
 
 def test_a_condition_of_which_nothing_was_kept_counts():

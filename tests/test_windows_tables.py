@@ -7,7 +7,7 @@ import pytest
 from onbin import tagging
 from onbin.columns import COLUMNS
 from onbin.windows import KEPT, LEFT_OUT, Unplaced, Window, WindowVerdict
-from onbin.windows_tables import samples_by_condition, survival_rows, verdict_rows
+from onbin.windows_tables import Chain, samples_by_condition, survival_rows, verdict_rows
 
 FLICKERING = {"view": ["left"], "both": ["left", "right"], "rest": []}
 TRIALS = [{"trial": 1}, {"trial": 2}, {"trial": 3}]
@@ -81,14 +81,17 @@ def recorded():
     return np.stack([left, 4 * left, -left + 2 * right])
 
 
-def survivals(recorded, removal, gates=None, conditions=("view", "both"), n_samples=500):
+def survivals(
+    recorded, removal, gates=None, conditions=("view", "both"), n_samples=500, good=(0, 1, 2),
+    average_reference=False, filter_gain=1.0,
+):  # fmt: skip
     terms = terms_at(left=12, right=15, off=20)
     kept = [Window(i, c, 0, 1000 * i, n_samples, 0.0) for i, c in enumerate(conditions)]
     gates = np.zeros((1, recorded.shape[1])) if gates is None else gates
     rows = survival_rows(
         recorded,
         ["O1", "Oz", "Fz"],
-        removal,
+        Chain(good, average_reference, removal, {(term.tag, "1f"): filter_gain for term in terms}),
         gates,
         kept,
         terms,
@@ -117,6 +120,27 @@ def test_what_the_removal_takes_is_told(recorded):
     assert rows["left"]["gain"] == pytest.approx(10 / 18, rel=1e-9)
     assert rows["left"]["topography_correlation"] == pytest.approx(10 / np.sqrt(108), rel=1e-9)
     assert rows["right"]["gain"] == pytest.approx(1, rel=1e-9)
+
+
+def test_filters_count_too(recorded):
+    left = survivals(recorded, lambda share: np.diag([1, 0.5, 1]), filter_gain=0.99)["left"]
+    assert left["filter_gain"] == 0.99
+    assert left["peak_gain"] == pytest.approx(0.99 * 0.5, rel=1e-9)
+    assert left["gain"] == pytest.approx(0.99 * 10 / 18, rel=1e-9)
+
+
+def test_an_interpolated_channel_counts_by_what_it_does_to_the_reference_alone(recorded):
+    """Oz is bad: made from O1 (its copy), and then part of the average reference."""
+    recorded[1] = recorded[0]
+    referenced = recorded - recorded.mean(axis=0)
+    left = survivals(referenced, lambda share: np.eye(3), good=(0, 2), average_reference=True)[
+        "left"
+    ]
+    # O1 and Fz of (1, -1), against their own average (1, -1), against that of three (2/3, -4/3)
+    assert left["site"] == "O1"
+    assert left["peak_gain"] == pytest.approx(2 / 3, rel=1e-9)
+    assert left["gain"] == pytest.approx(1, rel=1e-9)
+    assert left["topography_correlation"] == pytest.approx(2 / np.sqrt(2 * 20 / 9), rel=1e-9)
 
 
 def test_terms_of_any_of_the_windows_are_told_apart(recorded):

@@ -71,7 +71,9 @@ COLUMNS = {
     "windows_placed": _count("Windows that the trials hold."),
     "windows_kept": _count("Windows that were kept."),
     # verdicts
-    "verdict": _text("good, bad, kept, removed or left out."),
+    "verdict": _text(
+        "good, bad, kept, removed or left out; of a decision leave out, keep, bad, good or remove."
+    ),
     "reason": _text("Why; n/a where there is nothing to say."),
     # channels and components
     "name": _text("Channel."),
@@ -80,12 +82,28 @@ COLUMNS = {
     "status": _text("good or bad, as the dataset says."),
     "position": _text("Where the channel's position comes from: dataset, template or none."),
     "component": _count("Number of the independent component, from 0."),
+    "peak_channel": _text("Channel where the component's map is largest."),
     "component_class": _text("Most probable class by ICLabel."),
     "probability": Column(
         "Probability of that class.", source="Pion-Tonachini et al. 2019, NeuroImage 198:181"
     ),
+    **{
+        f"{label}_p": Column(f"Probability of the class {label.replace('_', ' ')}.")
+        for label in (
+            "brain",
+            "muscle",
+            "eye",
+            "heart",
+            "line_noise",
+            "channel_noise",
+            "other",
+        )
+    },
+    "eye_correlation": Column("Largest absolute correlation with an EOG channel."),
+    "heart_correlation": Column("Largest absolute correlation with an ECG channel."),
     "variance_share": Column("Share of the signal's variance that runs through the component."),
-    "tag_share": Column("Largest share of a driven term's power that runs through it."),
+    "tag_share": Column("Largest share of a tag's power that runs through it."),
+    "tag_shares": _text("That share for each tag."),
     "flagged": Column(
         "Whether it would be removed but carries too much of a tag: a person decides.",
         kind="boolean",
@@ -117,9 +135,36 @@ COLUMNS = {
     "gradient_limit_uv_per_ms": Column("Its limit.", "µV/ms"),
     "muscle_uv": Column("Largest root mean square above 30 Hz of any channel.", "µV"),
     "muscle_limit_uv": Column("Its limit.", "µV"),
+    # decisions
+    "item": _text("Channel; or number and peak channel of a component, such as 3 Fp1."),
+    "by": _text("Who decided."),
+    "date": _text("When, such as 2026-03-31."),
     # filters
-    "gain": Column("Measured gain at the term: 1 leaves it as it is."),
-    "peak_gain": Column("Gain at the channel where the term is largest, which site names."),
+    "recorded_rate_hz": Column("Sampling rate of the recording.", "Hz"),
+    "decimation_factor": _count("Recorded over working rate; 1 where nothing was decimated."),
+    "recorded_s": Column("Length of the recording.", "s"),
+    "filter_kind": _text("high-pass, low-pass, anti-alias, band-stop, or fit and subtraction."),
+    "filter_rate_hz": Column("Sampling rate at which the filter runs.", "Hz"),
+    "edge_low_hz": Column(
+        "Where the pass band begins; of a stop band where the one below ends.", "Hz"
+    ),
+    "edge_high_hz": Column(
+        "Where the pass band ends; of a stop band where the one above begins.", "Hz"
+    ),
+    "half_low_hz": Column("-6 dB point of the lower transition.", "Hz"),
+    "half_high_hz": Column("-6 dB point of the upper transition.", "Hz"),
+    "transition_hz": Column("Width of each transition, from pass band to stop band.", "Hz"),
+    "filter_window": _text("Window of the sinc, or weight of the fit."),
+    "n_taps": _count("Length of the kernel in samples, an odd number: zero phase."),
+    "kernel_s": Column("Length of the kernel, or of a stretch of the fit.", "s"),
+    "gain": Column(
+        "Measured gain at the term, 1 leaves it as it is: of the filters; or of the whole cleaning "
+        "(filters, interpolation, reference, components) over all channels."
+    ),
+    "filter_gain": Column("Gain of decimation and filters alone."),
+    "peak_gain": Column(
+        "That of the whole cleaning at the channel where the term is largest, which site names."
+    ),
     "topography_correlation": Column(
         "Correlation of the term's topography before and after the cleaning."
     ),
@@ -351,7 +396,10 @@ COLUMNS = {
     # study
     "measure": _text("Column that is compared."),
     "comparison": _text("Comparison, as named in the settings."),
-    "kind": _text("within people, between groups, or correlation with a covariate."),
+    "kind": _text(
+        "Of a comparison: within people, between groups, or correlation with a covariate; of a "
+        "decision: recording, channel or component."
+    ),
     "plus": _text("What is compared."),
     "minus": _text("What it is compared with."),
     "n": _count("People in the comparison."),
@@ -364,6 +412,7 @@ COLUMNS = {
     "p": Column("p by flipping signs, or by permuting people.", null="uniform"),
     "p_holm": Column("p after Holm's correction over the planned comparisons."),
     "recordings": _count("Recordings of the participant."),
+    "left_out": _text("Recordings of the participant that are left out, and why."),
     "channels_bad": _count("Bad channels, the most in one recording."),
     "channels_total": _count("EEG channels, the fewest in one recording."),
     "components_removed": _count("Independent components removed, over recordings."),

@@ -3,9 +3,11 @@
 import warnings
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
+from onbin.decisions import REMOVE
 from onbin.filtering import apply_fir, decimate, design_highpass
 
 REMOVED, KEPT = "removed", "kept"
@@ -26,6 +28,7 @@ SAMPLES_PER_WEIGHT = 20
 # Variance, over the largest, below which a direction is but rounding (an earlier reference).
 SMALLEST_EIGENVALUE = 1e-8
 LABEL_SECONDS = 600.0
+BLOCK_SAMPLES = 50_000
 PASSING = ("eye",)  # classes whose artifacts come and go
 # Where a passing artifact is: beyond so many robust sd and so long to each side, with soft edges;
 # it is passing if so much of its power lies there.
@@ -81,6 +84,20 @@ class ComponentVerdict:
     probability: float | None
     variance_share: float
     largest_tag_share: float
+
+    def row(self, peak_channel: str) -> dict[str, Any]:
+        """Row of the table of verdicts."""
+        return {
+            "component": self.component,
+            "peak_channel": peak_channel,
+            "verdict": self.verdict,
+            "reason": self.reason,
+            "component_class": self.label,
+            "probability": self.probability,
+            "variance_share": self.variance_share,
+            "tag_share": self.largest_tag_share,
+            "flagged": self.flagged,
+        }
 
 
 def fit_components(raw, rank: int, method: str = "picard", seed: int = 0) -> Fit:
@@ -212,11 +229,133 @@ class Separation:
         """No components."""
         return cls(np.empty((len(channels), 0)), np.empty((0, len(channels))), np.array(channels))
 
+    @property
+    def peak_channels(self) -> list[str]:
+        """Channel where each component's map is largest."""
+        return self.channel[np.abs(self.maps).argmax(axis=0)].tolist() if self.maps.size else []
+
+    @property
+    def items(self) -> list[str]:
+        """Components as decisions name them: number and peak channel, such as ``3 Fp1``."""
+        return [f"{number} {peak}" for number, peak in enumerate(self.peak_channels)]
+
     def removal(self, removed: Sequence[int], gates: Sequence[float]) -> np.ndarray:
         """Matrix (n_channels, n_channels) that takes so much of components out of the channels."""
         removed = list(removed)
         taken = np.asarray(gates)[:, None] * self.unmixing[removed]
         return np.eye(len(self.maps)) - self.maps[:, removed] @ taken
+
+
+@dataclass(frozen=True)
+class Evidence:
+    """What speaks for and against each component.
+
+    Attributes
+    ----------
+    separation : Separation
+    probabilities : ndarray, shape (n_components, 7)
+        By ICLabel, in the order of `CLASSES`; NaN where it could not label.
+    eye_correlation, heart_correlation : ndarray, shape (n_components,)
+        Largest absolute correlation with an EOG and ECG channel; NaN without one.
+    variance_share : ndarray, shape (n_components,)
+    tag : ndarray of str, shape (n_tags,)
+    tag_share : ndarray, shape (n_components, n_tags)
+        From `tag_shares`.
+    """
+
+    separation: Separation
+    probabilities: np.ndarray
+    eye_correlation: np.ndarray
+    heart_correlation: np.ndarray
+    variance_share: np.ndarray
+    tag: np.ndarray
+    tag_share: np.ndarray
+
+    @classmethod
+    def none(cls, channels: Sequence[str]) -> "Evidence":
+        """No components."""
+        empty = np.empty(0)
+        return cls(
+            Separation.none(channels), np.empty((0, len(CLASSES))), empty, empty, empty,
+            np.empty(0, dtype=str), np.empty((0, 0)),
+        )  # fmt: skip
+
+    def arrays(self) -> dict[str, np.ndarray]:
+        """All of it by name."""
+        own = {name: getattr(self, name) for name in self.__dataclass_fields__}
+        separation = own.pop("separation")
+        return own | {name: getattr(separation, name) for name in Separation.__dataclass_fields__}
+
+    @classmethod
+    def of(cls, stored: Mapping[str, np.ndarray]) -> "Evidence":
+        """Take it from what `arrays` gave."""
+        of_separation = Separation.__dataclass_fields__
+        separation = Separation(**{name: stored[name] for name in of_separation})
+        others = {name: array for name, array in stored.items() if name not in of_separation}
+        return cls(separation=separation, **others)
+
+    def rows(self) -> list[dict[str, Any]]:
+        """Rows of the table of evidence."""
+        return [
+            {
+                "component": number,
+                "peak_channel": peak,
+                "component_class": CLASSES[int(np.argmax(chances))] if known else None,
+                "probability": chances.max() if known else None,
+                **{
+                    f"{label.replace(' ', '_')}_p": chance
+                    for label, chance in zip(CLASSES, chances, strict=True)
+                },
+                "eye_correlation": self.eye_correlation[number],
+                "heart_correlation": self.heart_correlation[number],
+                "variance_share": self.variance_share[number],
+                "tag_share": self.tag_share[number].max(initial=0.0),
+                "tag_shares": "; ".join(
+                    f"{name} {share:.3f}"
+                    for name, share in zip(self.tag, self.tag_share[number], strict=True)
+                ),
+            }
+            for number, (peak, chances, known) in enumerate(
+                zip(
+                    self.separation.peak_channels,
+                    self.probabilities,
+                    np.isfinite(self.probabilities).all(axis=1),
+                    strict=True,
+                )
+            )
+        ]
+
+    def judge(
+        self, limits: ComponentLimits, decided: Mapping[str, Mapping[str, str]]
+    ) -> list[ComponentVerdict]:
+        """Say which components go, see `judge_components`; `decided` goes by `Separation.items`."""
+        correlations = {"eye": self.eye_correlation, "heart": self.heart_correlation}
+        return judge_components(
+            self.probabilities,
+            self.tag_share,
+            self.variance_share,
+            limits,
+            {label: values for label, values in correlations.items() if np.isfinite(values).all()},
+            {
+                number: decided[item]
+                for number, item in enumerate(self.separation.items)
+                if item in decided
+            },
+        )
+
+
+def words(row: Mapping[str, Any]) -> str:
+    """What the table of evidence says of a component, in short."""
+    label = "not labelled"
+    if row["component_class"]:
+        label = f"{row['component_class']} {row['probability']:.2f}"
+    told = [label, f"{100 * row['variance_share']:.1f} % of variance"]
+    if row["tag_share"] > 0:
+        told.append(f"{100 * row['tag_share']:.0f} % of a tag")
+    for kind in ("eye", "heart"):
+        if np.isfinite(row[f"{kind}_correlation"]):
+            told.append(f"{kind} r {row[f'{kind}_correlation']:.2f}")
+    return ", ".join(told)
 
 
 def activity(sources: np.ndarray, rate_hz: float, passing: Sequence[bool]) -> np.ndarray:
@@ -277,7 +416,11 @@ def remove_components(
     chosen = list(removed)
     sources = separation.unmixing[chosen] @ data_uv
     gates = activity(sources, rate_hz, [label in PASSING for label in removed.values()])
-    return data_uv - separation.maps[:, chosen] @ (gates * sources), gates
+    sources *= gates
+    cleaned_uv = data_uv.copy()
+    for row, weights in zip(cleaned_uv, separation.maps[:, chosen], strict=True):
+        row -= weights @ sources
+    return cleaned_uv, gates
 
 
 def label_components(raw, ica) -> tuple[np.ndarray, tuple[str, ...]]:
@@ -368,9 +511,19 @@ def artifact_correlations(raw, separation: Separation) -> dict[str, np.ndarray]:
 
 def variance_shares(data_uv: np.ndarray, maps: np.ndarray, unmixing: np.ndarray) -> np.ndarray:
     """Back-projected variance of each component, as a share of their sum, (n_components,)."""
-    sources_variance = np.einsum("ij,jk,ik->i", unmixing, np.cov(data_uv), unmixing)
+    sources_variance = np.einsum("ij,jk,ik->i", unmixing, _covariance(data_uv), unmixing)
     variance = sources_variance * (maps**2).sum(axis=0)
     return variance / variance.sum()
+
+
+def _covariance(data_uv: np.ndarray) -> np.ndarray:
+    """Covariance of channels in double precision, block by block: no copy of a long recording."""
+    mean_uv = data_uv.mean(axis=1, dtype=float, keepdims=True)
+    total = np.zeros((len(data_uv), len(data_uv)))
+    for start in range(0, data_uv.shape[1], BLOCK_SAMPLES):
+        block = data_uv[:, start : start + BLOCK_SAMPLES] - mean_uv
+        total += block @ block.T
+    return total / (data_uv.shape[1] - 1)
 
 
 def tag_shares(
@@ -437,6 +590,7 @@ def judge_components(
     variance: np.ndarray,
     limits: ComponentLimits,
     correlations: Mapping[str, np.ndarray] | None = None,
+    decided: Mapping[int, Mapping[str, str]] | None = None,
 ) -> list[ComponentVerdict]:
     """Say which components go.
 
@@ -452,6 +606,8 @@ def judge_components(
         What goes, and what protects.
     correlations : mapping of str to ndarray, optional
         From `artifact_correlations`.
+    decided : mapping of int to mapping, optional
+        A person's decisions by component: they go before all else; see `decisions.about`.
     """
     verdicts = []
     for component, chances in enumerate(probabilities):
@@ -470,15 +626,22 @@ def judge_components(
         largest = float(shares[component].max(initial=0.0))
         flagged = bool(why) and largest > limits.max_tag_share
         if flagged:
-            reason = f"{why[0]}, but carries {largest:.0%} of a tag's power: a person decides"
+            reason = (
+                f"{why[0]}, but carries {100 * largest:.0f} % of a tag's power: a person decides"
+            )
         elif why:
             reason = "; ".join(why)
         else:
             reason = "no class to remove is likely enough" if labelled else "not labelled"
+        goes = bool(why) and not flagged
+        if decision := (decided or {}).get(component):
+            goes = decision["verdict"] == REMOVE
+            reason = f"{decision['told']}; {reason}"
+            flagged = False
         verdicts.append(
             ComponentVerdict(
                 component=component,
-                verdict=REMOVED if why and not flagged else KEPT,
+                verdict=REMOVED if goes else KEPT,
                 reason=reason,
                 flagged=flagged,
                 label=CLASSES[likeliest] if labelled else None,

@@ -18,6 +18,7 @@ log = logging.getLogger("onbin")
 
 TEMPLATE_MONTAGE = "colin27_1005"
 AUXILIARY_TYPES = ("eog", "ecg")
+BLOCK_SAMPLES = 50_000
 EEG_SCALE_UV = (0.01, 100_000.0)  # what a channel's spread can be, whatever the amplifier
 
 
@@ -234,11 +235,16 @@ def events_file(files: Iterable[str]) -> str | None:
     return max(candidates, key=len, default=None)
 
 
-def read_signal(path: str | Path):
-    """Read a signal of ours as mne's Raw, in memory."""
+def open_signal(path: str | Path):
+    """Open a signal of ours as mne's Raw; its samples stay in the file."""
     import mne
 
-    return mne.io.read_raw_fif(path, preload=True, verbose="error")
+    return mne.io.read_raw_fif(path, preload=False, verbose="error")
+
+
+def read_signal(path: str | Path):
+    """Read a signal of ours as mne's Raw, in memory."""
+    return open_signal(path).load_data(verbose="error")
 
 
 def write_signal(raw, path: str | Path) -> None:
@@ -246,17 +252,24 @@ def write_signal(raw, path: str | Path) -> None:
     raw.save(path, fmt="single", overwrite=True, verbose="error")
 
 
-def with_eeg(raw, eeg_uv: np.ndarray):
-    """Copy of a Raw with another EEG, in µV."""
-    copy = raw.copy()
-    picks = [copy.ch_names.index(name) for name in eeg_names(copy)]
-    copy._data[picks] = eeg_uv * 1e-6
-    return copy
+def put_eeg(raw, eeg_uv: np.ndarray) -> None:
+    """Give a Raw in memory another EEG, in µV."""
+    for name, row in zip(eeg_names(raw), eeg_uv, strict=True):
+        raw._data[raw.ch_names.index(name)] = row * 1e-6
 
 
 def eeg_uv(raw) -> np.ndarray:
-    """EEG of a Raw in µV, shape (n_channels, n_times)."""
-    return raw.get_data(picks="eeg") * 1e6
+    """EEG of a Raw in µV, shape (n_channels, n_times).
+
+    In single precision, as signals are stored, and block by block: an hour of 64 channels takes a
+    quarter of a gigabyte.
+    """
+    names = eeg_names(raw)
+    data_uv = np.empty((len(names), raw.n_times), dtype=np.float32)
+    for start in range(0, raw.n_times, BLOCK_SAMPLES):
+        stop = min(start + BLOCK_SAMPLES, raw.n_times)
+        data_uv[:, start:stop] = raw.get_data(names, start, stop) * 1e6
+    return data_uv
 
 
 def positions_m(raw) -> np.ndarray:
@@ -299,6 +312,7 @@ def with_data(raw, data_uv: np.ndarray, rate_hz: float):
     ----------
     raw : mne.io.Raw
     data_uv : ndarray, shape (n_channels, n_times)
+        It is taken over, and holds volts afterwards: a copy may be half of the memory.
     rate_hz : float
     """
     import mne
@@ -309,7 +323,8 @@ def with_data(raw, data_uv: np.ndarray, rate_hz: float):
         with info._unlock():
             info["sfreq"] = rate_hz
             info["lowpass"] = min(info["lowpass"] or rate_hz / 2, rate_hz / 2)
-        working = mne.io.RawArray(data_uv * 1e-6, info, verbose="error")
+        data_uv *= 1e-6
+        working = mne.io.RawArray(data_uv, info, verbose="error")
         working.set_annotations(_relative(raw.annotations), verbose="error")
     return working
 
@@ -332,15 +347,18 @@ def check_scale(data_uv: np.ndarray, raw) -> None:
     DataError
         If samples are not finite, or the units must be wrong by orders of magnitude.
     """
-    if not np.isfinite(data_uv).all():
-        names = [raw.ch_names[i] for i in np.flatnonzero(~np.isfinite(data_uv).all(axis=1))]
+    names = [
+        name for name, row in zip(raw.ch_names, data_uv, strict=True) if not np.isfinite(row).all()
+    ]
+    if names:
         raise DataError(
             f"{', '.join(names)}: some samples are not finite numbers. Export the recording anew, "
             "or leave it out."
         )
     low, high = EEG_SCALE_UV
-    eeg = [kind == "eeg" for kind in raw.get_channel_types()]
-    spread = float(np.median(np.std(data_uv[eeg], axis=1)))
+    kinds = raw.get_channel_types()
+    spreads = [np.std(row) for row, kind in zip(data_uv, kinds, strict=True) if kind == "eeg"]
+    spread = float(np.median(spreads))
     if not low <= spread <= high:
         raise DataError(
             f"the median channel varies by {spread:.3g} µV (standard deviation), expected {low} to "

@@ -139,6 +139,12 @@ def left_out(decisions: Iterable[Decision]) -> dict[str, str]:
     return {d.recording: d.told for d in decisions if d.verdict == LEAVE_OUT}
 
 
+def trusted(decisions: Iterable[Decision], recordings: Iterable[Recording]) -> dict[str, str]:
+    """Recordings, by name, that are kept whatever the limits for trust say, and why."""
+    kept = {d.recording: d.told for d in decisions if (d.kind, d.verdict) == ("recording", KEEP)}
+    return {r.name: kept[r.stem] for r in recordings if r.stem in kept}
+
+
 def remaining(recordings: Sequence[Recording], left_out: Collection[str]) -> list[Recording]:
     """Recordings that are not left out.
 
@@ -165,7 +171,10 @@ def about(decisions: Iterable[Decision], recording: str, kind: str) -> list[dict
 
 
 def by_item(
-    chosen: Sequence[Mapping[str, str]], items: Collection[str], path: str, recording: str
+    chosen: Sequence[Mapping[str, str]],
+    items: Collection[str],
+    path: str | None,
+    recording: str,
 ) -> dict[str, Mapping[str, str]]:
     """Decisions by the item that they are about.
 
@@ -175,8 +184,8 @@ def by_item(
         From `about`.
     items : collection of str
         Those that exist.
-    path : str
-        The table, to name the line of one that does not.
+    path : str or None
+        The table, to name the line of one that does not; None where nothing is decided.
     recording : str
         As the table names it.
 
@@ -200,16 +209,59 @@ def by_item(
     return {decision["item"]: decision for decision in chosen}
 
 
-def suggestion(recording: str, kind: str, item: str | None, verdict: str, reason: str) -> dict:
-    """Line of a draft, for a person to look at."""
-    return dict.fromkeys(HEADER) | {
+def _suggested(recording: str, kind: str, item: str | None, verdict: str, reason: str) -> dict:
+    return {
         "recording": recording,
         "kind": kind,
         "item": item,
         "verdict": verdict,
         "reason": reason,
         "by": "onbin",
+        "date": None,
     }
+
+
+def of_participants(rows: Iterable[Mapping[str, Any]], recordings: Sequence[str]) -> list[dict]:
+    """Suggest to leave out the recordings of those whom the study sets aside.
+
+    Parameters
+    ----------
+    rows : rows
+        The study's table of participants.
+    recordings : sequence of str
+        File names of the recordings, without _eeg and extension.
+    """
+    return [
+        _suggested(recording, "recording", None, LEAVE_OUT, row["reason"])
+        for row in rows
+        if not row["in_study"]
+        for recording in recordings
+        if recording.startswith(f"{row['participant']}_")
+    ]
+
+
+def of_channels(recording: str, rows: Iterable[Mapping[str, Any]]) -> list[dict]:
+    """Suggest what the step sensors found of the channels."""
+    return [
+        _suggested(recording, "channel", row["name"], BAD, row["reason"])
+        for row in rows
+        if row["verdict"] == BAD
+    ]
+
+
+def of_components(recording: str, rows: Iterable[Mapping[str, Any]]) -> list[dict]:
+    """Suggest what the step windows found of the components; a flagged one is kept."""
+    return [
+        _suggested(
+            recording,
+            "component",
+            f"{row['component']} {row['peak_channel']}",
+            KEEP if row["flagged"] else REMOVE,
+            row["reason"],
+        )
+        for row in rows
+        if row["flagged"] or row["verdict"] == "removed"
+    ]
 
 
 def row(decision: Decision) -> dict[str, Any]:

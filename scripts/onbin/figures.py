@@ -4,15 +4,14 @@ Colour never stands alone: markers, line styles or words say the same, and a tab
 of the results has the numbers.
 """
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from functools import wraps
-from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-INK, MUTED, PALE = "#1b2530", "#6b7480", "#dde2e6"
+from onbin.drawing import INK, MUTED, PALE, WIDTH_IN, new_figure, styled
+
 ATTENDED, UNATTENDED = "flickers, attended", "flickers, not attended"
 FLICKERS, STILL = "flickers", "does not flicker"
 ROLES = {  # colour and marker of what a tag does in a condition
@@ -22,18 +21,6 @@ ROLES = {  # colour and marker of what a tag does in a condition
     STILL: ("#7d8590", "^"),
 }
 HEAT = "YlGnBu"
-STYLE = {
-    "font.size": 9,
-    "axes.titlesize": 9.5,
-    "axes.edgecolor": MUTED,
-    "axes.spines.top": False,
-    "axes.spines.right": False,
-    **dict.fromkeys(("text.color", "axes.labelcolor", "xtick.color", "ytick.color"), INK),
-    "legend.frameon": False,
-    "figure.constrained_layout.use": True,
-}
-RESOLUTION_DPI = 130
-WIDTH_IN = 9.0
 FEWEST_FOR_MAP = 4  # positions, to interpolate between
 SHOWN_HZ = (2.0, 40.0)
 MOST_COLUMNS = 4
@@ -92,37 +79,14 @@ def words(name: str) -> str:
     return name.replace("_", " ")
 
 
-def save(figure: Any, path: str | Path) -> None:
-    """Write a figure as PNG; the bytes depend on what it shows alone."""
-    figure.savefig(path, dpi=RESOLUTION_DPI, metadata={"Software": None})
-
-
-def _styled(draw: Callable[..., Any]) -> Callable[..., Any]:
-    @wraps(draw)
-    def styled(*args: Any, **named: Any) -> Any:
-        from matplotlib import rc_context
-
-        with rc_context(STYLE | {"backend": "agg"}):
-            return draw(*args, **named)
-
-    return styled
-
-
-def _figure(width_in: float, height_in: float) -> Any:
-    from matplotlib.figure import Figure
-
-    return Figure(figsize=(width_in, height_in))
-
-
-@_styled
 def note(text: str) -> Any:
     """A figure that says why there is nothing to draw."""
-    figure = _figure(WIDTH_IN, 1.0)
+    figure = new_figure(WIDTH_IN, 1.0)
     figure.text(0.5, 0.5, text, ha="center", va="center")
     return figure
 
 
-@_styled
+@styled
 def quality(people: Sequence[Quality], min_windows: Mapping[str, int], max_bad_share: float) -> Any:
     """Windows kept, bad channels and components removed, person by person.
 
@@ -133,7 +97,7 @@ def quality(people: Sequence[Quality], min_windows: Mapping[str, int], max_bad_s
     conditions = list(min_windows)
 
     height_in = 1.7 + 0.24 * len(people)
-    figure = _figure(max(WIDTH_IN, 5.4 + 0.9 * len(conditions)), height_in)
+    figure = new_figure(max(WIDTH_IN, 5.4 + 0.9 * len(conditions)), height_in)
     kept_axes, bad_axes, removed_axes = figure.subplots(
         1, 3, width_ratios=(max(1.0, 0.45 * len(conditions)), 1, 1.2)
     )
@@ -186,12 +150,12 @@ def quality(people: Sequence[Quality], min_windows: Mapping[str, int], max_bad_s
     return figure
 
 
-@_styled
+@styled
 def bins(neighbourhoods: Sequence[Neighbourhood]) -> Any:
     """Mean amplitude at each tag and at its neighbouring bins, one panel a tag and condition."""
     tags = list(dict.fromkeys(n.tag for n in neighbourhoods))
     conditions = list(dict.fromkeys(n.condition for n in neighbourhoods))
-    figure = _figure(max(WIDTH_IN, 2.1 * len(conditions)), 0.7 + 2.0 * len(tags))
+    figure = new_figure(max(WIDTH_IN, 2.1 * len(conditions)), 0.7 + 2.0 * len(tags))
     grid = figure.subplots(len(tags), len(conditions), sharex="row", sharey="row", squeeze=False)
     for axes in grid.flat:
         axes.set_visible(False)
@@ -228,7 +192,7 @@ def placed(info: Any) -> list[str]:
     ]
 
 
-@_styled
+@styled
 def topographies(rows: Sequence[MapRow], info: Any) -> Any:
     """Maps over the head, one row a tag or measure and one column a condition.
 
@@ -238,7 +202,7 @@ def topographies(rows: Sequence[MapRow], info: Any) -> Any:
 
     channels = placed(info)
     conditions = list(dict.fromkeys(name for row in rows for name in row.values))
-    figure = _figure(max(WIDTH_IN, 1.9 * len(conditions)), 0.3 + 2.2 * len(rows))
+    figure = new_figure(max(WIDTH_IN, 1.9 * len(conditions)), 0.3 + 2.2 * len(rows))
     grid = figure.subplots(len(rows), len(conditions), squeeze=False)
     for line, row in zip(grid, rows, strict=True):
         finite = [v for values in row.values.values() for v in values.values() if np.isfinite(v)]
@@ -264,7 +228,7 @@ def topographies(rows: Sequence[MapRow], info: Any) -> Any:
     return figure
 
 
-@_styled
+@styled
 def responses(rows: Sequence[Mapping[str, Any]]) -> Any:
     """Each person's amplitude with its 95 % interval, by condition, one panel a tag.
 
@@ -277,7 +241,7 @@ def responses(rows: Sequence[Mapping[str, Any]]) -> Any:
     tags = list(dict.fromkeys(row["tag"] for row in rows))
     conditions = list(dict.fromkeys(row["condition"] for row in rows))
     people = sorted({row["participant"] for row in rows})
-    figure = _figure(max(WIDTH_IN, 1.8 * len(conditions)), 0.9 + 2.4 * len(tags))
+    figure = new_figure(max(WIDTH_IN, 1.8 * len(conditions)), 0.9 + 2.4 * len(tags))
     grid = figure.subplots(len(tags), 1, sharex=True, squeeze=False)[:, 0]
     spread = np.linspace(-0.36, 0.36, len(people) + 2)[1:-1]  # one alone is in the middle
     size = 5 if len(people) <= 20 else 3
@@ -309,7 +273,7 @@ def responses(rows: Sequence[Mapping[str, Any]]) -> Any:
     return figure
 
 
-@_styled
+@styled
 def alpha(
     spectra: Sequence[Spectrum],
     tags_hz: Mapping[str, Mapping[str, float]],
@@ -331,7 +295,7 @@ def alpha(
     conditions = list(dict.fromkeys(spectrum.condition for spectrum in spectra))
     columns = min(len(conditions), MOST_COLUMNS)
     lines = -(-len(conditions) // columns)
-    figure = _figure(WIDTH_IN, 2.6 * lines + 1.7)
+    figure = new_figure(WIDTH_IN, 2.6 * lines + 1.7)
     above, below = figure.subfigures(2, 1, height_ratios=(2.6 * lines, 1.7))
     grid = above.subplots(lines, columns, sharex=True, sharey=True, squeeze=False)
     for axes in grid.flat[len(conditions) :]:
@@ -377,7 +341,7 @@ def alpha(
     return figure
 
 
-@_styled
+@styled
 def relation(
     people: Sequence[Mapping[str, Any]],
     group: Sequence[Mapping[str, Any]],
@@ -395,7 +359,7 @@ def relation(
         ``tag``, ``in_study``, ``little_uv``, ``much_uv``: mean response in the windows with little
         and with much alpha.
     """
-    figure = _figure(WIDTH_IN, 3.8)
+    figure = new_figure(WIDTH_IN, 3.8)
     left, right = figure.subplots(1, 2)
     tags = list(dict.fromkeys(row["tag"] for row in people))
     colour = ROLES[UNATTENDED][0]

@@ -11,7 +11,7 @@ from functools import cached_property
 import numpy as np
 
 from onbin.errors import DataError, SettingsError
-from onbin.tagging import ANTIALIAS_PASSBAND
+from onbin.tagging import ANTIALIAS_PASSBAND, LINE_REACH_HZ, other_removal
 
 # Transition width times kernel length over sampling rate (Widmann, Schröger & Maess 2015).
 WIDTH_FACTORS = {"hamming": 3.3, "blackman": 5.5}
@@ -122,8 +122,9 @@ def design_lowpass(sfreq_hz: float, edge_hz: float) -> FilterDesign:
 def design_antialias(sfreq_hz: float, factor: int) -> FilterDesign:
     """Design the low-pass that comes before keeping one sample in `factor`.
 
-    Its pass band ends at `tagging.ANTIALIAS_PASSBAND` of the new rate and its stop band begins at half the new rate, so
-    that nothing folds back; a Blackman window holds the stop band near -74 dB.
+    Its pass band ends at `tagging.ANTIALIAS_PASSBAND` of the new rate and its stop band begins at
+    half the new rate, so that nothing folds back; a Blackman window holds the stop band near
+    -74 dB.
     """
     rate_hz = sfreq_hz / factor
     return FilterDesign(
@@ -154,6 +155,28 @@ def design_notch(
         half_amplitude_hz=(centre_hz - half_hz, centre_hz + half_hz),
         n_taps=_kernel_length("hamming", sfreq_hz, transition_hz),
     )
+
+
+def antialias(recorded_rate_hz: float, factor: int) -> list[FilterDesign]:
+    """Filter that came before decimation by `factor`: none where nothing was decimated."""
+    return [design_antialias(recorded_rate_hz, factor)] if factor > 1 else []
+
+
+def design_row(design: FilterDesign) -> dict:
+    """Row of the table of filters: ends of pass bands, -6 dB points, transition, length."""
+    low, high = design.kind in ("high-pass", "band-stop"), design.kind != "high-pass"
+    return {
+        "filter_kind": design.kind,
+        "filter_rate_hz": design.sfreq_hz,
+        "edge_low_hz": design.edges_hz[0] if low else None,
+        "edge_high_hz": design.edges_hz[-1] if high else None,
+        "half_low_hz": design.half_amplitude_hz[0] if low else None,
+        "half_high_hz": design.half_amplitude_hz[-1] if high else None,
+        "transition_hz": design.transition_hz,
+        "filter_window": design.window,
+        "n_taps": design.n_taps,
+        "kernel_s": design.n_taps / design.sfreq_hz,
+    }
 
 
 def _continued(signal: np.ndarray, before: int, after: int) -> np.ndarray:
@@ -362,8 +385,7 @@ def measured_gain(
     return gains
 
 
-LINE_WINDOW_S = 4.0
-LINE_REACH_HZ = 2 / LINE_WINDOW_S  # no term may be nearer to the line than its removal reaches
+LINE_WINDOW_S = float(2 / LINE_REACH_HZ["fit"])
 
 
 @dataclass(frozen=True)
@@ -405,17 +427,48 @@ class FilterChain:
             designs += [design_notch(sfreq_hz, float(centre_hz)) for centre_hz in multiples]
         return cls(sfreq_hz, tuple(designs), line_hz, bool(line_hz) and line_removal == "fit")
 
+    @property
+    def line_removal(self) -> str:
+        """How the line is taken out, in the words of the settings."""
+        return "fit" if self.fit_line else "notch" if self.line_hz else "none"
+
     def require_free_of_line(self, terms_hz: Iterable[float]) -> None:
-        """See that no term is so near to the line that its removal would take the response out."""
+        """See that no term is so near to the line that its removal would take the response out.
+
+        Raises
+        ------
+        SettingsError
+            With what other way there is.
+        """
         if self.line_hz is None:
             return
-        pairs = check_line(terms_hz, self.line_hz, LINE_REACH_HZ)
+        reach_hz = float(LINE_REACH_HZ[self.line_removal])
+        pairs = check_line(terms_hz, self.line_hz, reach_hz)
         if pairs:
             near = "; ".join(f"{term:.4g} Hz and {multiple:g} Hz" for term, multiple in pairs)
+            nearest_hz = min(abs(term - multiple) for term, multiple in pairs)
             raise SettingsError(
-                f"the mains lies on what is to be measured ({near}). Set filter.line_removal: "
-                "none, or measure fewer harmonics."
+                f"the mains lies on what is to be measured ({near}): line_removal: "
+                f"{self.line_removal} reaches {reach_hz:g} Hz. Set filter.line_removal: "
+                f"{other_removal(self.line_removal, nearest_hz)}, or measure fewer harmonics."
             )
+
+    def line_rows(self) -> list[dict]:
+        """Rows of the table of filters for a line that is fitted and subtracted."""
+        if not self.fit_line:
+            return []
+        reach_hz = float(LINE_REACH_HZ["fit"])
+        return [
+            {
+                "filter_kind": f"fit and subtraction at {multiple_hz:g} Hz",
+                "filter_rate_hz": self.sfreq_hz,
+                "edge_low_hz": multiple_hz - reach_hz,
+                "edge_high_hz": multiple_hz + reach_hz,
+                "filter_window": "hann",
+                "kernel_s": LINE_WINDOW_S,
+            }
+            for multiple_hz in np.arange(self.line_hz, self.sfreq_hz / 2 - reach_hz, self.line_hz)
+        ]
 
     def __call__(self, data: np.ndarray) -> np.ndarray:
         """Filter each channel, shape (n_channels, n_times)."""

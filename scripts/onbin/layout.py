@@ -122,6 +122,19 @@ def entities(name: str) -> dict[str, str]:
     return dict(part.split("-", 1) for part in parts if "-" in part)
 
 
+def full_name(stem: str) -> str:
+    """Name of a recording from its file name alone.
+
+    Examples
+    --------
+    >>> full_name("sub-01_ses-2_task-panels")
+    'sub-01/ses-2/eeg/sub-01_ses-2_task-panels'
+    """
+    labels = entities(stem)
+    folders = [f"{key}-{labels[key]}" for key in ("sub", "ses") if key in labels]
+    return "/".join([*folders, "eeg", stem])
+
+
 def result(results: str, name: str) -> str:
     """Path of a file of the results, with its wildcards: the one place that makes such paths."""
     return f"{results}/{FILES[name]}"
@@ -207,12 +220,12 @@ def find_recordings(
             "dataset_description.json."
         )
     wanted = {f"sub-{label}" for label in participants}
-    present = [e.name for e in os.scandir(folder) if e.is_dir() and e.name.startswith("sub-")]
+    present = participant_folders(folder)
     missing = sorted(wanted - set(present))
     if missing:
         raise SettingsError(
             f"dataset.participants: {folder} has no {', '.join(missing)}; it has "
-            f"{', '.join(sorted(present)) or 'no sub-… folder'}."
+            f"{', '.join(present) or 'no sub-… folder'}."
         )
     recordings = []
     shared = _data_files(folder)
@@ -241,6 +254,12 @@ def find_recordings(
             f"sub-01/eeg/sub-01_task-x_eeg{EEG_FORMATS[0]} ({', '.join(EEG_FORMATS)})."
         )
     return recordings
+
+
+def participant_folders(folder: str | Path) -> list[str]:
+    """Participants that have a folder in the dataset, with sub-."""
+    found = (e.name for e in os.scandir(folder) if e.is_dir() and e.name.startswith("sub-"))
+    return sorted(found)
 
 
 def _data_files(folder: Path) -> list[str]:

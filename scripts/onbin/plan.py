@@ -25,7 +25,7 @@ SETTINGS = (
     "conditions.*.flickering",
     "windows.length_s",
     "filter",
-    "intake.working_rate_hz",
+    "least_rate_hz",
     "response.neighbours",
     "response.skip",
     "alpha.band_hz",
@@ -33,7 +33,6 @@ SETTINGS = (
 )
 FRAME_TOLERANCE = Fraction(1, 1000)  # how far a nominal frequency may be from whole frames
 OUTSIDE = "outside the filters"
-LINE_REACH_HZ = Fraction(1, 2)  # how far the removal of the mains reaches, as the step filter does
 DRIVEN_BELOW_HZ = 200  # responses to flicker are lost in the noise well below (common practice)
 
 Level = Literal["stop", "caution", "note"]
@@ -162,7 +161,7 @@ def working_rate(recorded: Fraction, least: Fraction) -> Fraction:
 
 def assumed_setup(settings: Mapping) -> Setup:
     """What the settings alone tell: the least working rate that intake keeps."""
-    least = tagging.exact(settings["intake"]["working_rate_hz"])
+    least = tagging.exact(settings["least_rate_hz"])
     return Setup(least, settings["filter"]["line_hz"])
 
 
@@ -338,14 +337,19 @@ def _beyond_display(settings: Mapping, name: str, frequency: Fraction) -> Iterat
 
 def _on_mains(settings: Mapping, setup: Setup) -> Iterator[Finding]:
     """Terms that the removal of the mains would take out; the step filter refuses them."""
-    if not setup.line_hz or settings["filter"]["line_removal"] == "none":
+    removal = settings["filter"]["line_removal"]
+    if not setup.line_hz or removal == "none":
         return
     line = tagging.exact(setup.line_hz)
-    keep = "set filter.line_removal: none and read the term with the hum in it"
     for term in measured_terms(settings, setup):
         multiple = max(round(term.frequency / line), 1) * line
-        if abs(term.frequency - multiple) > LINE_REACH_HZ:
+        apart = abs(term.frequency - multiple)
+        if apart > tagging.LINE_REACH_HZ[removal]:
             continue
+        other = tagging.other_removal(removal, apart)
+        keep = f"set filter.line_removal: {other}"
+        if other == "none":
+            keep += " and read the term with the hum in it"
         found = f"{label(term)} ({hertz(term.frequency)}) would be taken out with the mains"
         found += f" at {hertz(multiple)}"
         if term.harmonic == 1:

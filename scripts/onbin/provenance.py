@@ -17,9 +17,9 @@ BIDS_VERSION = "1.10.0"
 # What BIDS has no names for yet (spectra, ICA and epochs of EEG derivatives are not settled), and
 # the report.
 IGNORED = (
-    "*.fif", "*_eeg.json", "*_ica.*", "*_trials.*", "*_recording.*", "*_designs.*", "*_gains.*", "*_evidence.*", "*_sheet.*", "*_verdicts.*", "*_frequencies.*",
-    "*_coefficients.*", "*_psd.*", "*_measures.*", "*_windows.*", "study", "report.*",
-    "manifest.*",
+    "*.fif", "*_eeg.json", "*_ica.*", "*_trials.*", "*_recording.*", "*_designs.*", "*_gains.*",
+    "*_evidence.*", "*_sheet.*", "*_verdicts.*", "*_frequencies.*", "*_coefficients.*", "*_psd.*",
+    "*_measures.*", "*_windows.*", "study", "report.*", "manifest.*",
 )  # fmt: skip
 CHUNK = 1 << 20
 

@@ -14,6 +14,7 @@ from onbin import figures, inference, layout, provenance, report_tables
 from onbin.figures import words
 from onbin.filtering import FilterChain
 from onbin.report_tables import Material
+from onbin.settings import Settings
 
 TEMPLATES = ("report.html", "macros.html", "methods.html", "report.css")
 LEVEL = 0.05  # of the planned comparisons, two-sided
@@ -236,6 +237,11 @@ def plain(value: float | Fraction) -> str:
     return f"{float(value):.5g}"
 
 
+def known(value: float) -> str:
+    """Write a number as it was set; nothing where there is none."""
+    return plain(value) if math.isfinite(value) else ""
+
+
 def answers(material: Material) -> list[dict[str, Any]]:
     """Each planned comparison in words, with what to keep in mind."""
     return [
@@ -337,7 +343,7 @@ def page(material: Material, drawings: Mapping[str, Drawing], images: Mapping[st
     )
     environment.filters |= {
         "number": number, "p_value": p_value, "words": words, "listed": listed, "people": _people,
-        "plain": plain, "tenths": tenths,
+        "plain": plain, "tenths": tenths, "known": known,
     }  # fmt: skip
     shown = {
         name: {
@@ -365,6 +371,14 @@ def facts(material: Material) -> dict[str, Any]:
         "tags": material.tags,
         "participants": material.participants,
         "in_study": material.in_study,
+        "plans_by_person": material.plans,
+        "left_out": [
+            (name, why)
+            for left_out in material.settings["left_out"].values()
+            for name, why in left_out.items()
+        ],
+        "decisions": material.settings["decisions"],
+        "filters": report_tables.filters(material),
         "set_aside": [row for row in material.participants if not row["in_study"]],
         "answers": answers(material),
         "cautions": report_tables.cautions(material.tags, material.settings["tags"]),
@@ -417,7 +431,7 @@ def methods(material: Material) -> dict[str, Any]:
         "positions": sorted(
             {r["position"] for of in material.recordings.values() for r in of["channels"]} - {None}
         ),
-        "bad": spread(len(fact["bad"]) for fact in used),
+        "bad": spread(fact["bad"] for fact in used),
         "removed": spread(fact["removed"].total() for fact in used),
         "kept": {name: spread(counts) for name, counts in kept.items()},
     }
@@ -444,7 +458,9 @@ def settings_text(material: Material) -> str:
     """
     import yaml
 
-    whole = {name: value for name, value in material.settings.items() if name != "terms"}
+    whole = {
+        name: value for name, value in material.settings.items() if name in Settings.model_fields
+    }
     planned = [row["comparison"] for row in material.comparisons]
     whole["tags"] = {name: whole["tags"][name] for name in material.tags}
     whole["comparisons"] = {name: whole["comparisons"][name] for name in planned}

@@ -17,7 +17,7 @@ from onbin.response_tables import SUM
 
 Rows = Sequence[Mapping[str, Any]]
 
-KINDS = ("channels", "gains", "sensors", "components", "windows", "cleaning")
+KINDS = ("channels", "designs", "gains", "sensors", "components", "windows", "cleaning")
 FUNDAMENTAL = "1f"
 ATTENTION_LEVEL = 0.05  # of telling the attended tag of one person
 # Changes of light a second that can provoke seizures, and those to which photosensitive people
@@ -89,7 +89,8 @@ class Material:
     Attributes
     ----------
     settings : mapping
-        The whole settings, and ``terms``.
+        The whole settings, ``terms``, ``decisions`` (lines of the table) and ``left_out`` (why, by
+        participant and recording).
     participants, flicker, responses, alpha, relation, attention, comparisons, group : rows
         The study's tables.
     relation_windows : rows
@@ -155,8 +156,9 @@ def read(inputs: SimpleNamespace, settings: Mapping[str, Any]) -> Material:
     import mne
 
     participants = tables.read_table(inputs.participants)
+    recorded = [row for row in participants if row["recordings"]]
     plans, amplitudes_uv, spectra = {}, {}, []
-    for row, coefficients, psd in zip(participants, inputs.coefficients, inputs.psd, strict=True):
+    for row, coefficients, psd in zip(recorded, inputs.coefficients, inputs.psd, strict=True):
         who, stored = row["participant"], arrays.read(coefficients)
         plans[who] = Plan.of(stored, settings)
         amplitudes_uv[who] = _amplitudes(stored, settings)
@@ -339,7 +341,14 @@ def recording_facts(material: Material) -> list[dict[str, Any]]:
         {"recording": name, "participant": f"sub-{layout.entities(name)['sub']}"}
         | {
             "channels": len(of["sensors"]),
-            "bad": [(r["name"], r["reason"]) for r in of["sensors"] if r["verdict"] == "bad"],
+            "bad": sum(r["verdict"] == "bad" for r in of["sensors"]),
+            "marked": [r["name"] for r in of["sensors"] if r["status"] == "bad"],
+            "found": [
+                (r["name"], r["reason"])
+                for r in of["sensors"]
+                if (r["verdict"], r["status"]) == ("bad", "good")
+            ],
+            "sheet": layout.FILES["components_sheet"].format(recording=layout.full_name(name)),
             "components": len(of["components"]),
             "removed": Counter(
                 r["component_class"] for r in of["components"] if r["verdict"] == "removed"
@@ -369,10 +378,12 @@ def _windows(rows: Rows, conditions: Iterable[str]) -> dict[str, tuple[int, int]
 
 
 def quality(material: Material) -> list[figures.Quality]:
-    """The same by participant."""
+    """The same by participant who has recordings."""
     facts = recording_facts(material)
     people = []
     for row in material.participants:
+        if not row["recordings"]:
+            continue
         own = [fact for fact in facts if fact["participant"] == row["participant"]]
         windows: dict[str, tuple[int, int]] = {}
         for fact in own:
@@ -384,17 +395,33 @@ def quality(material: Material) -> list[figures.Quality]:
                 participant=row["participant"],
                 in_study=row["in_study"],
                 windows=windows,
-                bad_share=max(len(fact["bad"]) / fact["channels"] for fact in own),
+                bad_share=max(fact["bad"] / fact["channels"] for fact in own),
                 removed=sum((fact["removed"] for fact in own), Counter()),
             )
         )
     return people
 
 
+def filters(material: Material) -> list[dict[str, Any]]:
+    """Filters as they ran, each once, with the number of recordings."""
+    each: dict[str, dict[str, Any]] = {}
+    for of in material.recordings.values():
+        for row in of["designs"]:
+            half_hz = [row["half_low_hz"], row["half_high_hz"]]
+            shown = {**row, "half": [hz for hz in half_hz if np.isfinite(hz)], "count": 0}
+            each.setdefault(str(shown), shown)["count"] += 1
+    return list(each.values())
+
+
 def survival(material: Material) -> list[dict[str, Any]]:
     """Gains of filters and cleaning at each term: lowest and highest over recordings."""
     found: dict[tuple, dict[str, list]] = {}
-    columns = (("gains", "gain"), ("cleaning", "gain"), ("cleaning", "topography_correlation"))
+    columns = (
+        ("gains", "gain"),
+        ("cleaning", "gain"),
+        ("cleaning", "peak_gain"),
+        ("cleaning", "topography_correlation"),
+    )
     for of in material.recordings.values():
         for kind, column in columns:
             for row in of[kind]:

@@ -1,7 +1,8 @@
 """Sensors: which channels can be trusted and why, interpolation and reference."""
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Collection, Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -9,6 +10,18 @@ from onbin.errors import DataError
 from onbin.filtering import apply_fir, design_lowpass
 
 GOOD, BAD = "good", "bad"
+IN_THE_DATASET = "bad in the dataset"
+# The figure that speaks for each reason.
+FIGURE_OF = {
+    "flat": "flat_uv",
+    "saturated": "saturated_share",
+    "drop-outs": "dropout_share",
+    "jumps": "pops_per_min",
+    "high-frequency noise": "noise_ratio",
+    "deviating amplitude": "deviation_ratio",
+    "uncorrelated": "uncorrelated_share",
+    "unpredicted": "unpredicted_share",
+}
 
 # A robust z across channels, a common median and correlations need this many channels; below it
 # only ratios to the median channel are judged, with limits so much wider, and from 3 channels on.
@@ -83,7 +96,7 @@ class ChannelVerdict:
 
 @dataclass(frozen=True)
 class Referenced:
-    """An interpolated and referenced recording, and what became of its bad channels.
+    """The interpolated and referenced recording, and what became of its bad channels.
 
     `rank` counts what is left to unmix: each interpolated channel and a reference take one away.
     """
@@ -214,6 +227,43 @@ def judge_channels(
             )
         )
     return verdicts
+
+
+def verdict_row(
+    verdict: ChannelVerdict, marked: Collection[str], decided: Mapping[str, str] | None
+) -> dict[str, Any]:
+    """Row of the table of channels.
+
+    Parameters
+    ----------
+    verdict : ChannelVerdict
+        Of the tool.
+    marked : collection of str
+        Channels that the dataset calls bad: they are, whatever the tool finds.
+    decided : mapping or None
+        A person's decision, which goes before both; see `decisions.about`.
+    """
+    is_marked = verdict.channel in marked
+    reasons = [IN_THE_DATASET] * is_marked + [_told(verdict, reason) for reason in verdict.reasons]
+    word = BAD if reasons else GOOD
+    if decided:
+        word = decided["verdict"]
+        reasons.insert(0, decided["told"])
+    return {
+        "name": verdict.channel,
+        "verdict": word,
+        "reason": "; ".join(reasons) or None,
+        "status": BAD if is_marked else GOOD,
+        **verdict.figures,
+    }
+
+
+def _told(verdict: ChannelVerdict, reason: str) -> str:
+    """Reason with its figure and limit."""
+    name = FIGURE_OF[reason]
+    figure, limit = verdict.figures[name], verdict.limits[name]
+    bound = "at least" if name == "flat_uv" else "at most"
+    return f"{reason} ({name} {figure:.3g}, {bound} {limit:g})"
 
 
 def _share_of_telling(apart: np.ndarray, trusted: np.ndarray) -> np.ndarray:
@@ -453,7 +503,8 @@ def interpolate_and_reference(
     Parameters
     ----------
     raw : mne.io.Raw
-        It is not changed. Channels that are not EEG are left as they are.
+        It is changed, since a copy of a long one may not fit. Channels that are not EEG are left
+        as they are.
     bad : sequence of str
         Channels to interpolate. One without a position is left out instead.
     reference : "average", sequence of str or None
@@ -468,7 +519,6 @@ def interpolate_and_reference(
     DataError
         When no channel is left to interpolate from, or the reference cannot be used.
     """
-    raw = raw.copy()
     kinds = raw.get_channel_types()
     locations_m = {
         channel["ch_name"]: channel["loc"][:3]

@@ -434,8 +434,8 @@ def part(settings: Settings, *names: str) -> dict[str, Any]:
     settings : Settings
     names : str
         Such as ``filter``, ``alpha.segment_s`` or ``conditions.*.flickering``, where ``*`` stands
-        for every name; ``terms`` for all that makes up the terms; ``planned`` for the list of
-        comparisons.
+        for every name; ``terms`` for all that makes up the terms; ``least_rate_hz`` for the least
+        working rate; ``planned`` for the list of comparisons.
     """
     whole = plain(settings)
     whole["terms"] = {
@@ -443,7 +443,7 @@ def part(settings: Settings, *names: str) -> dict[str, Any]:
         "harmonics": settings.response.harmonics,
         "intermodulation_order": settings.response.intermodulation_order,
     }
-    whole["intake"]["working_rate_hz"] = tagging.least_rate(
+    whole["least_rate_hz"] = tagging.least_rate(
         settings.intake.working_rate_hz, settings.filter.lowpass_hz, whole["terms"]
     )
     whole["planned"] = [  # in the order of the settings, which mapping keys lose

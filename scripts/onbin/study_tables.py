@@ -14,6 +14,8 @@ from onbin.response_tables import SUM
 
 Rows = Sequence[Mapping[str, Any]]
 
+NO_RECORDING = "no EEG recording of the tasks taken in the dataset"
+
 
 def participant_row(
     participant: str,
@@ -22,6 +24,8 @@ def participant_row(
     windows: Mapping[str, Rows],
     max_bad_share: float,
     min_windows: Mapping[str, int],
+    trusted: Mapping[str, str],
+    left_out: Mapping[str, str],
 ) -> dict[str, Any]:
     """What became of one participant's recordings, and whether the study rests on them.
 
@@ -29,33 +33,49 @@ def participant_row(
     ----------
     participant : str
     sensors, components, windows : mapping
-        Tables of verdicts by recording.
+        Tables of verdicts by recording; empty where none is left.
     max_bad_share : float
         Share of bad channels above which a participant is set aside.
     min_windows : mapping
         Fewest windows of each condition, where it was recorded.
+    trusted : mapping of str to str
+        Recordings that a person keeps whatever these limits say, and why. Where they are all of a
+        participant's, windows are not counted against them either.
+    left_out : mapping of str to str
+        Recordings of the participant that are left out, and why.
     """
+    left_out_told = "; ".join(f"{name}: {why}" for name, why in left_out.items()) or None
+    if not sensors:
+        return {
+            "participant": participant,
+            "in_study": False,
+            "reason": left_out_told or NO_RECORDING,
+            "recordings": 0,
+            "left_out": left_out_told,
+        }
     kept: dict[str, int] = {}
     for rows in windows.values():
         for row in rows:
             kept[row["condition"]] = kept.get(row["condition"], 0) + (row["verdict"] == "kept")
     bad = {name: sum(r["verdict"] == "bad" for r in rows) for name, rows in sensors.items()}
-    reasons = [
+    too_many = [
         f"{name}: {bad[name]} of {len(rows)} channels are bad, more than {max_bad_share:.0%}"
         for name, rows in sensors.items()
-        if bad[name] / len(rows) > max_bad_share
+        if bad[name] / len(rows) > max_bad_share and name not in trusted
     ]
-    reasons += [
+    too_few = [
         f"{condition}: {count} windows kept, fewer than {min_windows[condition]}"
         for condition, count in kept.items()
-        if count < min_windows[condition]
+        if count < min_windows[condition] and not set(sensors) <= set(trusted)
     ]
+    reasons = too_many + too_few
     fewest = min(kept, key=kept.get, default=None)
     return {
         "participant": participant,
         "in_study": not reasons,
         "reason": "; ".join(reasons) or None,
         "recordings": len(windows),
+        "left_out": left_out_told,
         "channels_total": min(len(rows) for rows in sensors.values()),
         "channels_bad": max(bad.values()),
         "components_removed": sum(

@@ -11,6 +11,8 @@ from math import ceil, gcd, lcm
 USUAL_RATE_HZ = 250.0  # components are labelled by networks trained at this rate and above
 USUAL_PASSBAND_HZ = 100.0  # holds the muscle band, by which components and windows are judged
 ANTIALIAS_PASSBAND = 0.4  # end of what decimation lets pass, over the rate that it leaves
+# How far each way of removing the mains reaches: no term may be nearer to it.
+LINE_REACH_HZ = {"fit": Fraction(1, 2), "notch": Fraction(3, 2)}
 RATE_DENOMINATOR = 1000  # sampling rates are ratios of small integers: 1000/3, 512, 2048, ...
 
 
@@ -155,6 +157,11 @@ def least_rate(working_rate_hz: float | None, lowpass_hz: float | None, terms: M
     return working_rate_hz or max(
         USUAL_RATE_HZ, (lowpass_hz or _wanted_hz(terms)) / ANTIALIAS_PASSBAND
     )
+
+
+def other_removal(line_removal: str, apart_hz: Fraction | float) -> str:
+    """Way of removing the mains that spares a term so near to it, where one way does not."""
+    return "fit" if line_removal == "notch" and apart_hz > LINE_REACH_HZ["fit"] else "none"
 
 
 def _wanted_hz(terms: Mapping) -> float:
