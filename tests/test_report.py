@@ -98,7 +98,8 @@ class Study:
         self.inputs = SimpleNamespace(
             coefficients=[], psd=[], relation_windows=[], responses=[], alphas=[], relations=[],
             people=[], flicker=[], channels=[], designs=[], gains=[], sensors=[],
-            components=[], windows=[], cleaning=[], attentions=[], plan_page=str(folder / "flicker_plan.txt"),
+            components=[], windows=[], cleaning=[], attentions=[],
+            plan_page=str(folder / "flicker_plan.txt"),
         )  # fmt: skip
         (folder / "flicker_plan.txt").write_text("The plan can work as it stands.\n")
         for number, who in enumerate(self.names):
