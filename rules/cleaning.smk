@@ -82,7 +82,6 @@ rule components:
 rule windows:
     input:
         signal=result("sensors_signal"),
-        sensors=result("sensors_verdicts"),
         ica=result("components_ica"),
         trials=result("intake_trials"),
         gains=result("filter_gains"),
@@ -101,7 +100,6 @@ rule windows:
             "windows",
             "components.remove",
             "components.max_tag_share",
-            "sensors.reference",
             "filter.lowpass_hz",
             "terms",
             "conditions.*.flickering",

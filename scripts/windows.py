@@ -5,7 +5,6 @@ from onbin import (
     components,
     dataset,
     decisions,
-    sensors,
     tables,
     tagging,
     windows,
@@ -76,19 +75,11 @@ def clean_and_cut(inputs, outputs, settings):
         dataset.bad_spans(raw),
         [float(term.frequency) for term in terms],
     )
-    names = dataset.eeg_names(raw)
-    good = [r["name"] for r in tables.read_table(inputs.sensors) if r["verdict"] == sensors.GOOD]
     survival = windows_tables.survival_rows(
         before_uv,
-        names,
-        windows_tables.Chain(
-            good=[names.index(name) for name in good],
-            average_reference=settings["sensors"]["reference"] == "average",
-            removal=lambda open_share: separated.removal(removed, open_share),
-            filter_gains={
-                (row["tag"], row["term"]): row["gain"] for row in tables.read_table(inputs.gains)
-            },
-        ),
+        dataset.eeg_names(raw),
+        lambda open_share: separated.removal(removed, open_share),
+        {(row["tag"], row["term"]): row["gain"] for row in tables.read_table(inputs.gains)},
         gates,
         [v.window for v in verdicts if v.verdict == windows.KEPT],
         terms,

@@ -7,7 +7,7 @@ import pytest
 from onbin import tagging
 from onbin.columns import COLUMNS
 from onbin.windows import KEPT, LEFT_OUT, Unplaced, Window, WindowVerdict
-from onbin.windows_tables import Chain, samples_by_condition, survival_rows, verdict_rows
+from onbin.windows_tables import samples_by_condition, survival_rows, verdict_rows
 
 FLICKERING = {"view": ["left"], "both": ["left", "right"], "rest": []}
 TRIALS = [{"trial": 1}, {"trial": 2}, {"trial": 3}]
@@ -82,16 +82,16 @@ def recorded():
 
 
 def survivals(
-    recorded, removal, gates=None, conditions=("view", "both"), n_samples=500, good=(0, 1, 2),
-    average_reference=False, filter_gain=1.0,
-):  # fmt: skip
+    recorded, removal, gates=None, conditions=("view", "both"), n_samples=500, filter_gain=1.0
+):
     terms = terms_at(left=12, right=15, off=20)
     kept = [Window(i, c, 0, 1000 * i, n_samples, 0.0) for i, c in enumerate(conditions)]
     gates = np.zeros((1, recorded.shape[1])) if gates is None else gates
     rows = survival_rows(
         recorded,
         ["O1", "Oz", "Fz"],
-        Chain(good, average_reference, removal, {(term.tag, "1f"): filter_gain for term in terms}),
+        removal,
+        {(term.tag, "1f"): filter_gain for term in terms},
         gates,
         kept,
         terms,
@@ -127,20 +127,6 @@ def test_filters_count_too(recorded):
     assert left["filter_gain"] == 0.99
     assert left["peak_gain"] == pytest.approx(0.99 * 0.5, rel=1e-9)
     assert left["gain"] == pytest.approx(0.99 * 10 / 18, rel=1e-9)
-
-
-def test_an_interpolated_channel_counts_by_what_it_does_to_the_reference_alone(recorded):
-    """Oz is bad: made from O1 (its copy), and then part of the average reference."""
-    recorded[1] = recorded[0]
-    referenced = recorded - recorded.mean(axis=0)
-    left = survivals(referenced, lambda share: np.eye(3), good=(0, 2), average_reference=True)[
-        "left"
-    ]
-    # O1 and Fz of (1, -1), against their own average (1, -1), against that of three (2/3, -4/3)
-    assert left["site"] == "O1"
-    assert left["peak_gain"] == pytest.approx(2 / 3, rel=1e-9)
-    assert left["gain"] == pytest.approx(1, rel=1e-9)
-    assert left["topography_correlation"] == pytest.approx(2 / np.sqrt(2 * 20 / 9), rel=1e-9)
 
 
 def test_terms_of_any_of_the_windows_are_told_apart(recorded):

@@ -263,7 +263,7 @@ def _told(verdict: ChannelVerdict, reason: str) -> str:
     name = FIGURE_OF[reason]
     figure, limit = verdict.figures[name], verdict.limits[name]
     bound = "at least" if name == "flat_uv" else "at most"
-    return f"{reason} ({name} {figure:.3g}, {bound} {limit:g})"
+    return f"{reason}, {figure:.3g} ({bound} {limit:g})"
 
 
 def _share_of_telling(apart: np.ndarray, trusted: np.ndarray) -> np.ndarray:

@@ -1,7 +1,6 @@
 """From verdicts on windows to rows, and how long the windows of each condition are."""
 
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from fractions import Fraction
 from typing import Any
 
@@ -78,44 +77,11 @@ def verdict_rows(
         }
 
 
-@dataclass(frozen=True)
-class Chain:
-    """The cleaning of a recording, once fitted: a linear chain from channels to channels.
-
-    Attributes
-    ----------
-    good : sequence of int
-        Channels that were not interpolated.
-    average_reference : bool
-        Whether interpolated channels have a part in the reference.
-    removal : callable
-        From the share of time in which each removed component is taken out to the matrix of it.
-    filter_gains : mapping of (str, str) to float
-        Gain of the filters by tag and term.
-    """
-
-    good: Sequence[int]
-    average_reference: bool
-    removal: Callable[[np.ndarray], np.ndarray]
-    filter_gains: Mapping[tuple[str, str], float]
-
-    def matrices(self, open_share: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Cleaning, and what it is compared with, both of shape (n_good, n_channels).
-
-        The comparison is the good channels alone, against their own average where the reference is
-        an average: so what interpolation does to the reference is told too.
-        """
-        cleaning = self.removal(open_share)
-        baseline, good = np.eye(len(cleaning)), list(self.good)
-        if self.average_reference:
-            baseline[:, good] -= 1 / len(good)
-        return cleaning[good], baseline[good]
-
-
 def survival_rows(
     signal_uv: np.ndarray,
     names: Sequence[str],
-    chain: Chain,
+    removal: Callable[[np.ndarray], np.ndarray],
+    filter_gains: Mapping[tuple[str, str], float],
     gates: np.ndarray,
     kept: Sequence[Window],
     terms: Sequence[Term],
@@ -125,12 +91,19 @@ def survival_rows(
 ) -> Iterator[dict[str, Any]]:
     """What the whole cleaning does to each term, by passing its own topography through.
 
+    The topography is that of the interpolated and referenced channels, which these two steps leave
+    as it is: a spline through the good channels gives their own values back, and a mean of zero is
+    taken out without a trace. What is left to tell is what filters and components do.
+
     Parameters
     ----------
     signal_uv : ndarray, shape (n_channels, n_times)
         Before the removal of components.
     names : sequence of str
-    chain : Chain
+    removal : callable
+        From the share of time in which each removed component is taken out to the matrix of it.
+    filter_gains : mapping of (str, str) to float
+        Gain of the filters by tag and term.
     gates : ndarray, shape (n_removed, n_times)
         Where it is taken out.
     kept : sequence of Window
@@ -164,14 +137,13 @@ def survival_rows(
             ],
             axis=0,
         )
-        cleaning, baseline = chain.matrices(open_share)
-        (survival,) = chain_gain(cleaning, baseline, topography)
-        filter_gain = chain.filter_gains[term.tag, term.term]
+        (survival,) = chain_gain(removal(open_share), np.eye(len(names)), topography)
+        filter_gain = filter_gains[term.tag, term.term]
         yield {
             "tag": term.tag,
             "term": term.term,
             "frequency_hz": frequency_hz,
-            "site": names[chain.good[survival.peak_channel]],
+            "site": names[survival.peak_channel],
             "filter_gain": filter_gain,
             "gain": filter_gain * survival.gain,
             "peak_gain": filter_gain * survival.peak_gain,
