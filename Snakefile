@@ -31,9 +31,13 @@ rule cleaned:
         [result("windows_signal").format(recording=r.name) for r in RECORDINGS],
 
 
+onstart:
+    begin_run()
+
+
 onsuccess:
-    print(closing_summary())
+    say_last(closing_summary())
 
 
 onerror:
-    print(closing_failures())
+    say_last(closing_failures())

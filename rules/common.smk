@@ -1,5 +1,6 @@
 # The settings, the recordings, and how rules name files, settings and code.
 
+import atexit
 import os
 import sys
 import time
@@ -9,14 +10,15 @@ from snakemake.exceptions import WorkflowError
 
 sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
-from onbin import decisions, layout, summary
+from onbin import decisions, layout, records, summary
 from onbin.errors import OnbinError
 from onbin.fingerprint import fingerprint
 from onbin.settings import load_settings, part
 
 # Jobs run side by side, so each takes one thread; it also keeps sums in one order.
 os.environ.setdefault("OMP_NUM_THREADS", "1")
-STARTED_S = time.time()
+STARTED_S = time.monotonic()
+COMMAND = "snakemake --workflow-profile config/profiles/local"
 
 SETTINGS = Path(
     [*workflow.configfiles, Path(workflow.basedir) / "config" / "config.yaml"][0]
@@ -31,6 +33,10 @@ try:
     DECISIONS_FILE = os.path.relpath(SETTINGS.parent / STUDY.dataset.decisions)
     DECISIONS = decisions.read(DECISIONS_FILE, [recording.stem for recording in FOUND])
     LEFT_OUT = decisions.left_out(DECISIONS)
+    if STUDY.leave_out_failed:
+        LEFT_OUT |= summary.failed_recordings(
+            records.unfinished(STUDY.dataset.results), FOUND
+        )
     RECORDINGS = decisions.remaining(FOUND, LEFT_OUT)
 except OnbinError as error:
     sys.exit(f"\n{error}\n")
@@ -139,9 +145,25 @@ def benchmark_of(step, scope="study"):
     return layout.benchmark(RESULTS, step, scope)
 
 
+def begin_run():
+    """Take the results for this run and say what is there."""
+    try:
+        before = records.claim(RESULTS)
+    except OnbinError as error:
+        atexit.register(print, f"\n{error}")
+        raise
+    atexit.register(records.release, RESULTS)
+    print(summary.opening([*everything(), result("manifest_files")], before, RESULTS))
+
+
+def say_last(text):
+    """Say something after all that Snakemake has to say."""
+    atexit.register(print, text, flush=True)
+
+
 def closing_summary():
-    return summary.closing(RESULTS, time.time() - STARTED_S)
+    return summary.closing(RESULTS, time.monotonic() - STARTED_S)
 
 
 def closing_failures():
-    return summary.failed(RESULTS, STARTED_S)
+    return summary.failed(RESULTS, RECORDINGS, COMMAND)

@@ -23,9 +23,7 @@ def draft_decisions(inputs, outputs, settings):
     ]
     decided = {(row["recording"], row["kind"], row["item"]) for row in settings["decisions"]}
     open_lines = [
-        line
-        for line in suggested
-        if (line["recording"], line["kind"], line["item"] or tables.MISSING) not in decided
+        line for line in suggested if (line["recording"], line["kind"], line["item"]) not in decided
     ]
     tables.write_table(outputs.decisions, [*settings["decisions"], *open_lines], COLUMNS)
 

@@ -38,11 +38,11 @@ def digests(folder: Path) -> dict[str, str]:
     }
 
 
-def run_study(folder: Path, settings: dict) -> Finished:
+def run_study(folder: Path, settings: dict, *arguments: str) -> Finished:
     """Run a study from its settings in a fresh copy of the workflow."""
     copy_workflow(folder)
     path = write_settings(folder / "study.yaml", settings)
-    done = snakemake(folder, path)
+    done = snakemake(folder, path, *arguments)
     return Finished(folder, path, done.stdout + done.stderr, done.returncode)
 
 

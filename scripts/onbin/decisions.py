@@ -209,16 +209,11 @@ def by_item(
     return {decision["item"]: decision for decision in chosen}
 
 
-def _suggested(recording: str, kind: str, item: str | None, verdict: str, reason: str) -> dict:
-    return {
-        "recording": recording,
-        "kind": kind,
-        "item": item,
-        "verdict": verdict,
-        "reason": reason,
-        "by": "onbin",
-        "date": None,
-    }
+def suggest(recording: str, kind: str, item: str, verdict: str, reason: str) -> dict[str, str]:
+    """Line of the table that the tool suggests; whoever takes it over puts their name and date."""
+    told = " ".join(reason.split())
+    values = (recording, kind, item, verdict, told, "onbin", tables.MISSING)
+    return dict(zip(HEADER, values, strict=True))
 
 
 def of_participants(rows: Iterable[Mapping[str, Any]], recordings: Sequence[str]) -> list[dict]:
@@ -232,7 +227,7 @@ def of_participants(rows: Iterable[Mapping[str, Any]], recordings: Sequence[str]
         File names of the recordings, without _eeg and extension.
     """
     return [
-        _suggested(recording, "recording", None, LEAVE_OUT, row["reason"])
+        suggest(recording, "recording", tables.MISSING, LEAVE_OUT, row["reason"])
         for row in rows
         if not row["in_study"]
         for recording in recordings
@@ -243,7 +238,7 @@ def of_participants(rows: Iterable[Mapping[str, Any]], recordings: Sequence[str]
 def of_channels(recording: str, rows: Iterable[Mapping[str, Any]]) -> list[dict]:
     """Suggest what the step sensors found of the channels."""
     return [
-        _suggested(recording, "channel", row["name"], BAD, row["reason"])
+        suggest(recording, "channel", row["name"], BAD, row["reason"])
         for row in rows
         if row["verdict"] == BAD
     ]
@@ -252,7 +247,7 @@ def of_channels(recording: str, rows: Iterable[Mapping[str, Any]]) -> list[dict]
 def of_components(recording: str, rows: Iterable[Mapping[str, Any]]) -> list[dict]:
     """Suggest what the step windows found of the components; a flagged one is kept."""
     return [
-        _suggested(
+        suggest(
             recording,
             "component",
             f"{row['component']} {row['peak_channel']}",

@@ -13,6 +13,9 @@ from pathlib import Path
 
 from onbin.errors import DataError, SettingsError
 
+LOGS = "logs"
+RECORD_ENDING = ".unfinished.json"
+RUN_RECORD = f"{LOGS}/run.json"  # of the run of the whole that holds the results
 EEG_FORMATS = (".vhdr", ".edf", ".bdf", ".set")
 ENTITIES = ("sub", "ses", "task", "acq", "run")
 RECORDING_PATTERN = r"sub-[A-Za-z0-9+]+(/ses-[A-Za-z0-9+]+)?/eeg/sub-[A-Za-z0-9+_-]+"
@@ -160,12 +163,17 @@ def sidecar(path: str | Path) -> str:
 
 def log(results: str, step: str, scope: str) -> str:
     """Path of a step's log: ``scope`` is the wildcard that the step runs over, or ``study``."""
-    return f"{results}/logs/{step}/{scope}.log"
+    return f"{results}/{LOGS}/{step}/{scope}.log"
+
+
+def record_of(log_path: str) -> Path:
+    """Path of the record of a job that is under way or failed, from that of its log."""
+    return Path(log_path.removesuffix(".log") + RECORD_ENDING)
 
 
 def benchmark(results: str, step: str, scope: str) -> str:
     """Path of the file with a step's time and memory."""
-    return f"{results}/logs/{step}/{scope}.benchmark.tsv"
+    return f"{results}/{LOGS}/{step}/{scope}.benchmark.tsv"
 
 
 def check_results(results: str | Path, folder: str | Path) -> None:

@@ -3,20 +3,22 @@
 A script defines one function of ``inputs``, ``outputs`` and ``settings`` and hands it to `run`.
 """
 
+import errno
 import logging
 import os
+import resource
 import shutil
 import socket
 import sys
 import traceback
 import warnings
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from types import SimpleNamespace
-from typing import Any
+from typing import Any, TextIO
 
-from onbin import layout, provenance, tables
+from onbin import layout, provenance, records, tables
 from onbin.errors import OnbinError
 
 log = logging.getLogger("onbin")
@@ -36,7 +38,8 @@ def run(step: Callable[..., None], job: Any) -> None:
         What Snakemake calls ``snakemake``: input, output, params, log, rule.
     """
     outputs = {name: Path(str(path)) for name, path in job.output.items() if name != "sidecars"}
-    with _logging(job.log[0] if job.log else None):
+    told = None
+    with _recorded(job) as tell, _logging(job.log[0] if job.log else None):
         try:
             with _whole_or_absent(outputs) as making:
                 step(
@@ -48,33 +51,99 @@ def run(step: Callable[..., None], job: Any) -> None:
                     for path in making.values():
                         _write_sidecar(path, job)
         except OnbinError as error:
-            _fail(f"{job.rule}: {error}", job)
+            told = str(error)
+        except OSError as error:
+            log.error(traceback.format_exc())
+            told = _of_the_system(error)
         except Exception as error:
             log.error(traceback.format_exc())
             what = f"{type(error).__name__}: {error}"
-            _fail(f"{job.rule}: failed unexpectedly ({what}). The log has the details.", job)
+            told = f"failed unexpectedly ({what}). The log has the details."
+        if told:
+            tell(told)
+            log.error("%s: %s", job.rule, told)
+    if told:
+        print(f"\n{_scope(job)}, {job.rule}: {told}\n", file=sys.__stderr__, flush=True)
+        sys.exit(1)
+
+
+def _scope(job: Any) -> str:
+    """What a job is about: a recording, a participant, or the study."""
+    return " ".join(str(value) for _, value in job.wildcards.items()) or "study"
+
+
+def _of_the_system(error: OSError) -> str:
+    """Say in words what the system refused."""
+    where = error.filename or "a file"
+    if error.errno in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
+        return (
+            f"the disk is full ({error.strerror}: {where}). Make room and give the same command "
+            "again; what is done stays done."
+        )
+    if error.errno in (errno.EACCES, errno.EPERM, errno.EROFS):
+        return (
+            f"{where} cannot be read or written ({error.strerror}). See to the permissions of the "
+            "file and its folder, and give the same command again."
+        )
+    return f"{where}: {error.strerror or error}. The log has the details."
+
+
+@contextmanager
+def _recorded(job: Any) -> Iterator[Callable[[str], None]]:
+    """Keep a record of the job while it runs; yield how to tell why it fails."""
+    if not job.log:
+        yield lambda reason: None
+        return
+    path = layout.record_of(str(job.log[0]))
+    failed = False
+
+    def tell(reason: str) -> None:
+        nonlocal failed
+        failed = True
+        with suppress(OSError):  # a full disk; the first record stays, and the terminal tells
+            records.note(path, job.rule, _scope(job), reason)
+
+    with suppress(OSError):
+        records.note(path, job.rule, _scope(job))
+    yield tell
+    if not failed:
+        records.end(path)
 
 
 @contextmanager
 def _logging(path: str | None) -> Iterator[None]:
-    """Send the log, warnings and whatever libraries print to the rule's log file."""
-    if path is None:
+    """Send the log, warnings and whatever libraries print to the rule's log file.
+
+    Where that cannot be written, on a full disk say, the job goes on without: what becomes of its
+    outputs is told in any case.
+    """
+    try:
+        file = _open_log(path)
+    except OSError:
         yield
         return
+    handler = logging.StreamHandler(file)
+    handler.setFormatter(logging.Formatter("%(levelname)s %(message)s"))
+    kept = sys.stdout, warnings.showwarning, logging.raiseExceptions
+    log.addHandler(handler)
+    log.setLevel(logging.INFO)
+    sys.stdout, warnings.showwarning, logging.raiseExceptions = file, _log_warning, False
+    try:
+        yield
+    finally:
+        peak_mib = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024  # from KiB
+        log.info("peak memory: %.0f MiB", peak_mib)
+        sys.stdout, warnings.showwarning, logging.raiseExceptions = kept
+        log.removeHandler(handler)
+        with suppress(OSError):
+            file.close()
+
+
+def _open_log(path: str | None) -> TextIO:
+    if path is None:
+        return open(os.devnull, "w", encoding="utf-8")
     Path(path).parent.mkdir(parents=True, exist_ok=True)
-    with open(path, "w", encoding="utf-8", buffering=1) as file:
-        handler = logging.StreamHandler(file)
-        handler.setFormatter(logging.Formatter("%(levelname)s %(message)s"))
-        log.addHandler(handler)
-        log.setLevel(logging.INFO)
-        kept = sys.stdout, warnings.showwarning
-        sys.stdout = file
-        warnings.showwarning = _log_warning
-        try:
-            yield
-        finally:
-            sys.stdout, warnings.showwarning = kept
-            log.removeHandler(handler)
+    return open(path, "w", encoding="utf-8", buffering=1)
 
 
 def _log_warning(message: Warning | str, category: type[Warning], *_: object) -> None:
@@ -90,7 +159,7 @@ def _whole_or_absent(outputs: dict[str, Path]) -> Iterator[dict[str, Path]]:
     for left in first.parent.glob(f"{mark}*"):
         pid = left.name.removeprefix(mark)
         # a host's name may begin like another's; a number may be given to a process again
-        if pid.isdigit() and (int(pid) == os.getpid() or not _alive(int(pid))):
+        if pid.isdigit() and (int(pid) == os.getpid() or not records.process(int(pid))):
             shutil.rmtree(left, ignore_errors=True)
     folder = first.parent / f"{mark}{os.getpid()}"
     folder.mkdir()
@@ -107,27 +176,9 @@ def _whole_or_absent(outputs: dict[str, Path]) -> Iterator[dict[str, Path]]:
         shutil.rmtree(folder, ignore_errors=True)
 
 
-def _alive(pid: int) -> bool:
-    try:
-        os.kill(pid, 0)
-    except ProcessLookupError:
-        return False
-    except PermissionError:
-        return True
-    return True
-
-
 def _write_sidecar(made: Path, job: Any) -> None:
     about = {"Description": f"Made by the step {job.rule} of onbin."}
     if made.suffix == ".tsv":
         about = tables.dictionary(tables.header(made))
     text = provenance.make_sidecar(made, job.rule, map(str, job.input), job.params.settings, about)
     Path(layout.sidecar(made)).write_text(text, encoding="utf-8")
-
-
-def _fail(message: str, job: Any) -> None:
-    """Tell the user in the log and on the terminal, without a traceback, and end the job."""
-    log.error(message)
-    recording = " ".join(str(value) for _, value in job.wildcards.items())
-    print(f"\n{recording or 'study'}, {message}\n", file=sys.__stderr__, flush=True)
-    sys.exit(1)

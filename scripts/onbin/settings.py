@@ -347,6 +347,11 @@ class Settings(Part):
     relation: Relation
     trust: Trust = Trust()
     comparisons: dict[Label, Comparison] = Field({}, description="Planned comparisons by name.")
+    leave_out_failed: bool = Field(
+        False,
+        description="Whether recordings of which a step failed are left out, so that the study is "
+        "made from the rest. Meant for the command line: --config leave_out_failed=true.",
+    )
     seed: Annotated[int, Field(ge=0)] = Field(
         20261201, description="Seed of everything that draws random numbers."
     )

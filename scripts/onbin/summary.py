@@ -1,17 +1,43 @@
-"""What is said at the end of a run."""
+"""What is said at the beginning and at the end of a run."""
 
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 
-from onbin import layout, tables
+from onbin import decisions, layout, records, tables
+from onbin.layout import Recording
+from onbin.records import Record
 
-FAILURE = "ERROR "  # how the runner begins the line of a log that tells of a failure
+LEAVE_OUT_FAILED = "leave_out_failed"
+
+
+def opening(paths: Sequence[str], before: Record | None, results: str) -> str:
+    """What a run finds of earlier ones.
+
+    Parameters
+    ----------
+    paths : sequence of str
+        Every file that the study makes.
+    before : Record or None
+        Of a run that was broken off, from `records.claim`.
+    results : str
+    """
+    there = sum(Path(path).is_file() for path in paths)
+    lines = [f"\nFound {there} of {len(paths)} files of the study in {results}."]
+    if before:
+        lines.append("The run before this one was broken off; what it finished is kept.")
+    left = list(records.unfinished(results))
+    if left:
+        lines.append(f"{_count(len(left), 'step')} had not ended well and will be made anew:")
+        lines += [f"  {record.step} of {record.scope}" for record in left]
+    return "\n".join(lines)
 
 
 def closing(results: str, seconds: float) -> str:
-    """Who was used and set aside, where the report is, how long it took."""
+    """Who was used and set aside, where the report is, how long it took; the verdict is last."""
     report = Path(layout.result(results, "report_page"))
     table = Path(layout.result(results, "study_participants"))
     lines = [""]
+    verdict = "Complete."
     if table.is_file():
         rows = tables.read_table(table)
         used = [row for row in rows if row["in_study"]]
@@ -20,45 +46,75 @@ def closing(results: str, seconds: float) -> str:
             f"{sum(row['windows_kept'] for row in used)} windows from "
             f"{sum(row['recordings'] for row in used)} recordings."
         )
-        lines += [
-            f"  set aside: {row['participant']} ({row['reason']})"
-            for row in rows
-            if not row["in_study"]
-        ]
+        aside = [row for row in rows if not row["in_study"]]
+        left_out = [row for row in rows if row["in_study"] and row["left_out"]]
+        lines += [f"  set aside: {row['participant']} ({row['reason']})" for row in aside]
+        lines += [f"  left out: {row['left_out']}" for row in left_out]
+        if aside or left_out:
+            counts = [_count(len(aside), "participant") + " set aside"] * bool(aside)
+            counts += [f"recordings of {len(left_out)} more left out"] * bool(left_out)
+            verdict = f"Complete, with {' and '.join(counts)}."
     if report.is_file():
         lines.append(f"The report is {report}")
     minutes, rest = divmod(round(seconds), 60)
-    lines.append(f"Time taken: {minutes} min {rest} s")
+    lines += [f"Time taken: {minutes} min {rest} s", verdict]
     return "\n".join(lines)
 
 
-def failed(results: str, since: float) -> str:
-    """Which steps failed of which recordings, and why.
+def failed(results: str, recordings: Sequence[Recording], command: str) -> str:
+    """Which steps failed of which recordings, why, and what to do; the verdict is last.
 
     Parameters
     ----------
     results : str
-    since : float
-        Start of the run in seconds since the epoch: older logs are not of this run.
+    recordings : sequence of Recording
+        Those of the study; what was left of others is not told.
+    command : str
+        Command that starts a run.
     """
-    lines = []
-    folder = Path(results) / "logs"
-    for path in sorted(folder.rglob("*.log")):
-        if path.stat().st_mtime < since:
-            continue
-        told = [
-            line.removeprefix(FAILURE)
-            for line in path.read_text(encoding="utf-8", errors="replace").splitlines()
-            if line.startswith(FAILURE)
+    scopes = {"study", *(r.name for r in recordings), *(r.participant for r in recordings)}
+    left = [record for record in records.unfinished(results) if record.scope in scopes]
+    if not left:
+        return "\nFailed: the run did not end well; what Snakemake says above tells why."
+    lines = ["", f"{_count(len(left), 'step')} failed; all that does not rest on them is done."]
+    for record in left:
+        lines += [
+            f"  {record.scope}, {record.step}: {record.told}",
+            f"    log: {layout.log(results, record.step, record.scope)}",
         ]
-        if told:
-            scope = path.relative_to(folder).with_suffix("").as_posix().partition("/")[2]
-            lines.append(f"  {scope}, {told[-1]}\n    log: {path}")
-    if not lines:
-        return "\nThe run did not end well; what Snakemake says above tells why."
-    return (
-        f"\n{len(lines)} failed; all that does not rest on them is done.\n"
-        + "\n".join(lines)
-        + "\nPut right what is told and give the same command again, or go on without them: name"
-        "\nthe other participants under dataset.participants in the settings."
-    )
+    pasted = ["\t".join(map(str, line.values())) for line in failed_lines(left, recordings)]
+    lines += [
+        "Put right what is told and give the same command again: what is done stays done.",
+    ]
+    if pasted:
+        header = "\t".join(decisions.HEADER)
+        lines += [
+            "Or go on without them: make the study from the rest with",
+            f"  {command} --config {LEAVE_OUT_FAILED}=true",
+            "or decide it for good with these lines of the table of decisions (by tabs):",
+            f"  {header}",
+            *(f"  {line}" for line in pasted),
+        ]
+    return "\n".join([*lines, f"Failed: {_count(len(left), 'step')}."])
+
+
+def failed_recordings(left: Iterable[Record], recordings: Sequence[Recording]) -> dict[str, str]:
+    """Recordings of which a step failed, by file name, and why."""
+    why: dict[str, str] = {}
+    for record in left:
+        for recording in recordings:
+            if record.scope in (recording.name, recording.participant):
+                why.setdefault(recording.stem, f"failed in the step {record.step}: {record.told}")
+    return why
+
+
+def failed_lines(left: Iterable[Record], recordings: Sequence[Recording]) -> list[Mapping]:
+    """Lines of decisions that would leave them out."""
+    return [
+        decisions.suggest(stem, "recording", tables.MISSING, decisions.LEAVE_OUT, reason)
+        for stem, reason in failed_recordings(left, recordings).items()
+    ]
+
+
+def _count(number: int, name: str) -> str:
+    return f"{number} {name}{'s' if number != 1 else ''}"
