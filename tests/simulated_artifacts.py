@@ -1,10 +1,12 @@
 """Invented people with every artifact that cleaning is for, over artifact-free brains of the demo.
 
-The brains, blinks and muscle bursts are those of the demo's program, at 400 Hz, so that the third
-harmonic of the mains can be held. Added here: saccades, the heart, and mains hum that drifts. Bad
+The brains and blinks are those of the demo's program, at 400 Hz, so that the third harmonic of the
+mains can be held. Added here: saccades, lids that flutter while closed, muscle of the jaw and of
+the neck, which lies below the occipital channels, the heart, and mains hum that drifts. Bad
 channels and movement are left out: nothing but interpolation or leaving out helps against them.
-The sizes are common practice: a blink of 150-250 µV at Fp1 and Fp2, 10 µV between F8 and F7 for a
-degree of gaze, bursts of the jaw of 15-30 µV (RMS), a heart of 8-15 µV, mains of 3-15 µV.
+The sizes are common practice: a blink of 150-250 µV at Fp1 and Fp2, fluttering lids of 40-80 µV,
+10 µV between F8 and F7 for a degree of gaze, bursts of jaw and neck of 15-50 µV (RMS), whose
+spectrum reaches down to 10 Hz, a heart of 8-15 µV, mains of 3-15 µV.
 """
 
 import importlib.util
@@ -44,6 +46,7 @@ MUSCLE_HZ = (10.0, 150.0)
 DEGREE_UV = 10.0  # between F8 and F7
 PANEL_DEG = 6.0
 FIXATION_DEG = {"trial": 1.5, "other": 4.0}  # scatter of the gaze about its goal
+FLUTTERS = 2  # episodes while the eyes are closed
 COUPLING_S = 1.6  # time constant of an amplifier with a high-pass of 0.1 Hz
 BEATS_PER_MIN = 70.0
 THIRD_HARMONIC_SHARE = 0.2
@@ -58,6 +61,7 @@ def simulate(person, n_trials):
     blinks, _ = signals.blinks(
         brain.blocks, n_times, traits.blink_uv, signals.stream(person, "blinks")
     )
+    blinks += flutter(brain.blocks, n_times, signals.stream(person, "flutter"))
     coupled = int(person.label) % 2 == 0
     saccades = gaze(brain.blocks, n_times, coupled, signals.stream(person, "saccades"))
     dirty = brain.signal_uv + np.outer(blink_map, blinks) + np.outer(gaze_map, saccades)
@@ -89,6 +93,22 @@ def gaze(blocks, n_times, coupled, rng):
         at = stop
     course_uv = signals.smooth(DEGREE_UV * (goal_deg + scatter_deg * around), 0.04)
     return through_capacitor(course_uv) if coupled else course_uv
+
+
+def flutter(blocks, n_times, rng):
+    """Closed lids that flutter at 5 to 9 Hz for a second or more, in µV at Fp1 and Fp2."""
+    course_uv = np.zeros(n_times)
+    for block in blocks:
+        if block.kind != "rest_closed":
+            continue
+        onsets_s = block.onset_s + rng.uniform(1, block.duration_s - 4, FLUTTERS)
+        for onset_s in onsets_s:
+            n = signals.samples(rng.uniform(1, 3))
+            turns = rng.uniform(5, 9) * np.arange(n) / RATE_HZ
+            start = signals.samples(onset_s)
+            size_uv = rng.uniform(40, 80)
+            course_uv[start : start + n] += size_uv * np.hanning(n) * np.sin(2 * np.pi * turns)
+    return course_uv
 
 
 def through_capacitor(course_uv):

@@ -116,7 +116,7 @@ def test_the_response_passes_the_cleaning(demo, label):
     assert len(tags) == len(TAGS) * len(PLANTED)
     for row in tags:
         print(
-            f"sub-{label} {row['tag']} {row['term']}: gain {row['peak_gain']:.4f} at {row['site']}, "
+            f"sub-{label}, {row['tag']} {row['term']}: at {row['site']} {row['peak_gain']:.4f}, "
             f"{row['gain']:.4f} over the head, correlation {row['topography_correlation']:.4f}"
         )
     for row in tags:
