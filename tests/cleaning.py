@@ -26,7 +26,10 @@ def settings():
     whole = load_settings(DEMO_SETTINGS)
     return part(whole, *Settings.model_fields, "terms") | {
         "participant": WHO,
+        "recording": RECORDING,
         "recordings": [RECORDING],
+        "decisions": [],
+        "decisions_file": None,
     }
 
 
@@ -57,7 +60,7 @@ def take_in(folder, signal_uv, signals, blocks):
         coord_frame="head",
     )
     raw.set_montage(montage, verbose="error")
-    made = places(folder, "intake", "signal", "trials")
+    made = places(folder, "intake", "signal", "trials", "recording")
     dataset.write_signal(raw, made["signal"])
     trials = [
         {
@@ -69,13 +72,15 @@ def take_in(folder, signal_uv, signals, blocks):
         for number, block in enumerate((b for b in blocks if b.marked), start=1)
     ]
     tables.write_table(made["trials"], trials, list(trials[0]))
+    recorded = {"recorded_rate_hz": signals.RATE_HZ, "decimation_factor": 1}
+    tables.write_table(made["recording"], [recorded], list(recorded))
 
 
 def filtered(folder, chosen):
     """Run the step filter."""
     filter_step.filter_recording(
-        SimpleNamespace(**places(folder, "intake", "signal")),
-        SimpleNamespace(**places(folder, "filter", "signal", "gains")),
+        SimpleNamespace(**places(folder, "intake", "signal", "recording")),
+        SimpleNamespace(**places(folder, "filter", "signal", "designs", "gains")),
         chosen,
     )
 
@@ -84,26 +89,28 @@ def cleaned(folder, chosen):
     """Clean what was taken in, as the workflow does: from filters to windows."""
     filtered(folder, chosen)
     recorded = places(folder, "intake", "signal", "trials")
-    judged = places(folder, "sensors", "signal", "verdicts")
-    separated = places(folder, "components", "ica", "verdicts")
+    of_filter = places(folder, "filter", "signal", "gains")
+    of_sensors = places(folder, "sensors", "signal", "verdicts")
+    of_components = places(folder, "components", "ica", "evidence", "sheet")
     sensors_step.judge_sensors(
-        SimpleNamespace(**places(folder, "filter", "signal"), recorded=recorded["signal"]),
-        SimpleNamespace(**judged),
+        SimpleNamespace(signal=of_filter["signal"], recorded=recorded["signal"]),
+        SimpleNamespace(**of_sensors),
         chosen,
     )
     components_step.separate(
-        SimpleNamespace(signal=judged["signal"], sensors=judged["verdicts"]),
-        SimpleNamespace(**separated),
+        SimpleNamespace(signal=of_sensors["signal"], sensors=of_sensors["verdicts"]),
+        SimpleNamespace(**of_components),
         chosen,
     )
     windows_step.clean_and_cut(
         SimpleNamespace(
-            signal=judged["signal"],
-            ica=separated["ica"],
-            components=separated["verdicts"],
+            signal=of_sensors["signal"],
+            sensors=of_sensors["verdicts"],
+            ica=of_components["ica"],
+            gains=of_filter["gains"],
             trials=recorded["trials"],
         ),
-        SimpleNamespace(**places(folder, "windows", "signal", "verdicts", "gains")),
+        SimpleNamespace(**places(folder, "windows", "signal", "components", "verdicts", "gains")),
         chosen,
     )
 
@@ -116,8 +123,8 @@ def uncleaned(folder, chosen, windows):
     filtered(folder, chosen | {"filter": chosen["filter"] | {"line_removal": "none"}})
     raw = dataset.read_signal(places(folder, "filter", "signal")["signal"])
     made = places(folder, "windows", "signal", "verdicts")
-    done = sensors.interpolate_and_reference(raw, [], chosen["sensors"]["reference"])
-    dataset.write_signal(done.raw, made["signal"])
+    sensors.interpolate_and_reference(raw, [], chosen["sensors"]["reference"])
+    dataset.write_signal(raw, made["signal"])
     placed = [row | {"verdict": "kept"} for row in windows if row["start_sample"] is not None]
     tables.write_table(made["verdicts"], placed, list(placed[0]))
 
