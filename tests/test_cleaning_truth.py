@@ -80,7 +80,7 @@ def test_cleaning_brings_every_measure_closer_to_the_truth(tmp_path):
 
 def test_cleaning_brings_a_person_closer_to_the_truth(tmp_path):
     uncleaned, cleaned_ = compared(tmp_path, simulated.PEOPLE[:1], FEW_TRIALS)
-    # Of one person and few windows a single measure may go either way; what muscle does to the noise
-    # beside the tags, 4 dB without cleaning, stands out.
+    # Of one person and few windows a single measure may go either way; what muscle does to the
+    # noise beside the tags, 4 dB without cleaning, stands out.
     snr = [name for name in uncleaned if name.startswith("SNR")]
     assert sum(cleaned_[name][0] for name in snr) < sum(uncleaned[name][0] for name in snr)
