@@ -78,11 +78,11 @@ def test_mistakes_name_their_line(tmp_path):
             "line 2, column 1: the key 'study' stands twice",
         ),
         ("study:\n\ttitle: a\n", "Use spaces, not tabs"),
-        ("- a\n- b\n", "holds list, not"),
-        ("", "holds NoneType, not"),
+        ("- a\n- b\n", "holds ['a', 'b'], expected lines"),
+        ("", "holds nothing, expected lines"),
         ("study: {title: [a\n", "line 2"),
         ("? [a, b]\n: 1\n", "a key must be a word"),
-        ("study: !!python/object/apply:os.system [ls]\n", "could not determine a constructor"),
+        ("study: !!python/object/apply:os.system [ls]\n", "has no meaning here; remove it"),
     ],
 )
 def test_broken_yaml_is_told_plainly(write, text, expected):
@@ -113,7 +113,7 @@ def test_a_missing_file_a_folder_and_foreign_bytes(tmp_path):
         (lambda s: s["comparisons"]["watching_a_panel"]["plus"][0].pop("tag"), "add tag:"),
         (lambda s: s["alpha"].pop("left_region"), "both right_region and left_region"),
         (lambda s: s["conditions"].update({"Bad Name": {"events": {"a": 1}}}), "lower-case"),
-        (lambda s: s["windows"].update(skip_s=True), "must be a number, found True"),
+        (lambda s: s["windows"].update(skip_s=True), "must be a number, found true"),
     ],
 )
 def test_settings_that_cannot_work(write, change, expected):

@@ -6,8 +6,10 @@ from this module.
 
 import difflib
 import json
+import re
 from collections.abc import Hashable, Iterator, Mapping
 from fractions import Fraction
+from itertools import islice
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -17,11 +19,15 @@ from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationErr
 from onbin import plan, tagging
 from onbin.errors import SettingsError
 
+# No length, frequency or amplitude of such a study is larger; beyond it, sums take for ever.
+LARGEST = 1_000_000
+MOST_ENTRIES = 20_000  # of a settings file, aliases written out
+
 Label = Annotated[str, Field(pattern=r"^[a-z][a-z0-9_]*$")]
 Share = Annotated[float, Field(ge=0, le=1)]
-Positive = Annotated[float, Field(gt=0)]
-NotNegative = Annotated[float, Field(ge=0)]
-Count = Annotated[int, Field(ge=1)]
+Positive = Annotated[float, Field(gt=0, le=LARGEST)]
+NotNegative = Annotated[float, Field(ge=0, le=LARGEST)]
+Count = Annotated[int, Field(ge=1, le=LARGEST)]
 
 
 def _rising(pair: list[float]) -> list[float]:
@@ -30,15 +36,35 @@ def _rising(pair: list[float]) -> list[float]:
     return pair
 
 
+def _exact_number(value: int | float | str) -> int | float | str:
+    written = not isinstance(value, str) or re.fullmatch(
+        r"\d{1,15}(\.\d{1,15})?|\d{1,15}/\d{1,15}", value
+    )
+    try:
+        usable = bool(written) and 0 < tagging.exact(value) <= LARGEST
+    except (ValueError, ZeroDivisionError):
+        usable = False
+    if not usable:
+        raise ValueError(
+            f"must be a positive number or ratio such as 120/7, at most {LARGEST}, found "
+            f"{_shown(value)}"
+        )
+    return value
+
+
 Interval = Annotated[list[Positive], Field(min_length=2, max_length=2), AfterValidator(_rising)]
-ExactNumber = Annotated[int | float | str, Field(description="a number, or a ratio such as 120/7")]
+ExactNumber = Annotated[
+    int | float | str,
+    Field(description="a number, or a ratio such as 120/7"),
+    AfterValidator(_exact_number),
+]
 ComponentClass = Literal["muscle", "eye", "heart", "line noise", "channel noise", "other"]
 
 
 class Part(BaseModel):
     """A part of the settings: no unknown keys, no silent conversion."""
 
-    model_config = ConfigDict(extra="forbid", strict=True, frozen=True)
+    model_config = ConfigDict(extra="forbid", strict=True, frozen=True, allow_inf_nan=False)
 
 
 class Study(Part):
@@ -106,7 +132,7 @@ class Flicker(Part):
 class Tag(Part):
     """A frequency tag, by frames per cycle of the display or by its frequency."""
 
-    frames_per_cycle: Annotated[int, Field(ge=2)] | None = Field(
+    frames_per_cycle: Annotated[int, Field(ge=2, le=LARGEST)] | None = Field(
         None, description="Frames of the display in one cycle; needs display.refresh_hz."
     )
     frequency_hz: ExactNumber | None = Field(
@@ -230,12 +256,16 @@ class Windows(Part):
 class Response(Part):
     """What is measured at the tags."""
 
-    harmonics: Count = Field(3, description="Harmonics of each tag, the fundamental included.")
-    intermodulation_order: Annotated[int, Field(ge=1)] = Field(
+    harmonics: Annotated[int, Field(ge=1, le=100)] = Field(
+        3, description="Harmonics of each tag, the fundamental included."
+    )
+    intermodulation_order: Annotated[int, Field(ge=1, le=20)] = Field(
         2, description="Largest |a| + |b| of a·f1 + b·f2; 1 measures none."
     )
-    neighbours: Count = Field(10, description="Neighbouring bins on each side, for the noise.")
-    skip: Annotated[int, Field(ge=0)] = Field(
+    neighbours: Annotated[int, Field(ge=1, le=1000)] = Field(
+        10, description="Neighbouring bins on each side, for the noise."
+    )
+    skip: Annotated[int, Field(ge=0, le=1000)] = Field(
         1, description="Bins left out between a term and its neighbours."
     )
     level: Annotated[float, Field(gt=0, lt=0.5)] = Field(
@@ -352,7 +382,7 @@ class Settings(Part):
         description="Whether recordings of which a step failed are left out, so that the study is "
         "made from the rest. Meant for the command line: --config leave_out_failed=true.",
     )
-    seed: Annotated[int, Field(ge=0)] = Field(
+    seed: Annotated[int, Field(ge=0, lt=2**32)] = Field(
         20261201, description="Seed of everything that draws random numbers."
     )
 
@@ -377,6 +407,8 @@ class _Loader(yaml.SafeLoader):
 def _mapping_without_duplicates(loader: _Loader, node: yaml.MappingNode) -> dict:
     seen = set()
     for key_node, _ in node.value:
+        if key_node.tag == "tag:yaml.org,2002:merge":
+            continue
         key = loader.construct_object(key_node, deep=True)
         if not isinstance(key, Hashable):
             raise yaml.constructor.ConstructorError(
@@ -390,7 +422,14 @@ def _mapping_without_duplicates(loader: _Loader, node: yaml.MappingNode) -> dict
     return loader.construct_mapping(node, deep=True)
 
 
+def _no_tag(loader: _Loader, node: yaml.Node) -> None:
+    raise yaml.constructor.ConstructorError(
+        None, None, f"the tag {node.tag!r} has no meaning here; remove it", node.start_mark
+    )
+
+
 _Loader.add_constructor(yaml.resolver.BaseResolver.DEFAULT_MAPPING_TAG, _mapping_without_duplicates)
+_Loader.add_constructor(None, _no_tag)
 
 
 def load_settings(path: str | Path, changes: Mapping[str, Any] | None = None) -> Settings:
@@ -493,19 +532,63 @@ def _read_yaml(path: Path) -> tuple[dict, dict[tuple, int]]:
         raise SettingsError(f"{path} is a folder; give the settings file in it.") from None
     except UnicodeDecodeError:
         raise SettingsError(f"{path} is not text in UTF-8; save it as UTF-8.") from None
+    except OSError as error:
+        raise SettingsError(
+            f"{path} cannot be read ({error.strerror}); check its permissions and its path."
+        ) from None
     try:
+        # counted before values are built: aliases of aliases can stand for billions of them
+        lines = list(islice(_key_lines(yaml.compose(text, Loader=_Loader)), MOST_ENTRIES + 1))
+        if len(lines) > MOST_ENTRIES:
+            raise SettingsError(
+                f"{path} has more than {MOST_ENTRIES} entries once its aliases (*name) are "
+                "written out; write out those that you need."
+            )
         raw = yaml.load(text, Loader=_Loader)  # a SafeLoader: it builds plain values only
-        lines = dict(_key_lines(yaml.compose(text, Loader=yaml.SafeLoader)))
     except yaml.MarkedYAMLError as error:
         mark = error.problem_mark or error.context_mark
         place = f", line {mark.line + 1}, column {mark.column + 1}" if mark else ""
-        advice = " Use spaces, not tabs, to indent." if "'\\t'" in str(error.problem) else ""
-        raise SettingsError(f"{path}{place}: {error.problem}.{advice}") from None
-    except (yaml.YAMLError, ValueError, RecursionError) as error:
-        raise SettingsError(f"{path} is not valid YAML: {error}") from None
+        raise SettingsError(f"{path}{place}: {_yaml_problem(error)}.") from None
+    except yaml.reader.ReaderError as error:
+        raise SettingsError(
+            f"{path} holds a character that belongs in no text (#x{error.character:04x} at "
+            f"position {error.position}); remove it, and save the file as UTF-8."
+        ) from None
+    except RecursionError:
+        raise SettingsError(
+            f"{path} is nested too deeply, or an alias (*name) stands within what it stands for; "
+            "write it out."
+        ) from None
+    except ValueError as error:
+        raise SettingsError(
+            f"{path} holds a date or a number that cannot be ({str(error).split(';')[0]}); put it "
+            "between quotation marks if it is text."
+        ) from None
     if not isinstance(raw, dict):
-        raise SettingsError(f"{path} holds {type(raw).__name__}, not a list of `key: value` lines.")
-    return raw, lines
+        raise SettingsError(
+            f"{path} holds {_shown(raw)}, expected lines of `key: value`; begin with a copy of "
+            "config/config.yaml."
+        )
+    return raw, dict(lines)
+
+
+def _yaml_problem(error: yaml.MarkedYAMLError) -> str:
+    problem = str(error.problem)
+    if "'\\t'" in problem:
+        return f"{problem}. Use spaces, not tabs, to indent"
+    if problem == "second occurrence":  # of an anchor, which only the context tells
+        problem = str(error.context).split(";")[0]
+    return problem if ";" in problem else f"{problem}; correct this line or the one before"
+
+
+def _shown(value: Any) -> str:
+    """Value as it could stand in the file, shortened."""
+    if value is None:
+        return "nothing"
+    if isinstance(value, bool):
+        return str(value).lower()
+    text = repr(value)
+    return text if len(text) <= 60 else f"{text[:57]}..."
 
 
 def _key_lines(node: yaml.Node | None, prefix: tuple = ()) -> Iterator[tuple[tuple, int]]:
@@ -542,6 +625,8 @@ _EXPECTED = {
     "dict_type": "must hold `key: value` lines",
     "model_type": "must hold `key: value` lines",
     "list_type": "must be a list, such as [a, b]",
+    "finite_number": "must be a finite number",
+    "invalid_key": "is not a setting; names of settings are text",
 }
 
 
@@ -555,9 +640,11 @@ def _model_problems(raw: dict) -> Iterator[Problem]:
             where = _place(item["loc"], raw, item["type"] == "missing")
             alternatives.setdefault(where, []).append(_expectation(item, where))
             if item["type"] not in {"missing", "extra_forbidden", "value_error"}:
-                found[where] = f", found {item['input']!r}"
+                found[where] = f", found {_shown(item['input'])}"
         for where, expectations in alternatives.items():
-            yield where, " or ".join(dict.fromkeys(expectations)) + found.get(where, "")
+            first, *others = dict.fromkeys(expectations)
+            told = [first, *(other.removeprefix("must be ") for other in others)]
+            yield where, " or ".join(told) + found.get(where, "")
 
 
 def _place(location: tuple, raw: Any, missing: bool) -> tuple:
@@ -667,16 +754,6 @@ def _reference_problems(raw: dict) -> Iterator[Problem]:
 
 def _plan_problems(settings: Settings) -> Iterator[Problem]:
     """What cannot be measured as the settings stand."""
-    refresh = settings.display.refresh_hz
-    if refresh is not None and not _is_positive(refresh):
-        where = ("display", "refresh_hz")
-        yield where, f"must be a positive number or ratio, found {refresh!r}"
-        return
-    for name, tag in settings.tags.items():
-        if tag.frequency_hz is not None and not _is_positive(tag.frequency_hz):
-            where = ("tags", name, "frequency_hz")
-            yield where, f"must be a positive number or ratio, found {tag.frequency_hz!r}"
-            return
     for finding in plan.blocking(part(settings, *plan.SETTINGS)):
         yield finding.where, f"{finding.found}; {finding.advice}"
     for name, comparison in settings.comparisons.items():
@@ -686,10 +763,3 @@ def _plan_problems(settings: Settings) -> Iterator[Problem]:
                     where = ("comparisons", name, side, index)
                     if cell.tag is None:
                         yield where, f"{comparison.measure} is measured at a tag; add tag:"
-
-
-def _is_positive(value: int | float | str) -> bool:
-    try:
-        return tagging.exact(value) > 0
-    except (ValueError, ZeroDivisionError):
-        return False

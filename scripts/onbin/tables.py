@@ -57,27 +57,40 @@ def read_numbered(path: str | Path) -> list[tuple[int, dict[str, str]]]:
     Raises
     ------
     DataError
-        If a line has more or fewer cells than the header.
+        If a line has more or fewer cells than the header, or a column stands there twice.
     """
     try:
         text = Path(path).read_text(encoding="utf-8-sig")
     except UnicodeDecodeError:
         raise DataError(f"{path} is not text in UTF-8; save it as UTF-8.") from None
     numbered = enumerate(text.split("\n"), start=1)
-    lines = [(number, line) for number, line in numbered if line.strip()]
+    lines = [(number, _foreign_cells(line)) for number, line in numbered if line.strip()]
     if not lines:
         return []
-    header = [name.strip() for name in lines[0][1].split("\t")]
-    rows = []
-    for number, line in lines[1:]:
-        cells = [cell.strip() for cell in line.split("\t")]
+    (first, header), *others = lines
+    for name in header:
+        if header.count(name) > 1:
+            raise DataError(
+                f"{path}, line {first}: the column {name!r} stands {header.count(name)} times; "
+                "keep one."
+            )
+    for number, cells in others:
         if len(cells) != len(header):
             raise DataError(
                 f"{path}, line {number}: found {len(cells)} cells, expected {len(header)} as in "
                 f"the header; cells are parted by tabs."
             )
-        rows.append((number, dict(zip(header, cells, strict=True))))
-    return rows
+    return [(number, dict(zip(header, cells, strict=True))) for number, cells in others]
+
+
+def _foreign_cells(line: str) -> list[str]:
+    """Cells without the spaces and quotation marks around them."""
+    cells = [cell.strip() for cell in line.split("\t")]
+    quoted = [len(cell) > 1 and cell[0] == cell[-1] == '"' for cell in cells]
+    return [
+        cell[1:-1].replace('""', '"').strip() if marked else cell
+        for cell, marked in zip(cells, quoted, strict=True)
+    ]
 
 
 def dictionary(columns: Iterable[str]) -> dict[str, dict[str, str]]:
