@@ -18,6 +18,8 @@ rule intake:
         settings=lambda wildcards: settings_part(
             "least_rate_hz",
             "flicker.photodiode",
+            "filter.line_hz",
+            "regions",
             "conditions.*.events",
             "conditions.*.duration_s",
             folder=STUDY.dataset.folder,

@@ -1,16 +1,33 @@
 """Read a raw BIDS recording: EEG with positions, trials in the study's terms, working rate."""
 
-from onbin import dataset, filtering, layout, tables, tagging
+from onbin import dataset, filtering, headers, layout, sidecars, tables, tagging
 from onbin.runner import run
 
 
 def intake(inputs, outputs, settings):
-    """Bring a recording to its working rate."""
+    """Bring a recording to its working rate, once its files are seen to be sound."""
     recording = settings["recording"]
+    headers.require_files(inputs.files)
+    header = headers.read_header(inputs.files[0])
+    told = sidecars.read_eeg_json(inputs.files, recording)
+    sidecars.check_eeg_json(told, header, settings["filter"]["line_hz"])
+    described = sidecars.read_channels(inputs.files, header)
+    sidecars.check_positions(inputs.files)
+    sidecars.check_people(settings["folder"], recording)
     events = dataset.events_file(inputs.files)
     dataset.check_events(events)
-    raw = dataset.read_recording(settings["folder"], recording, settings["extension"])
-    channels = dataset.choose_channels(raw, settings["flicker"]["photodiode"])
+    trials = dataset.read_trials(
+        events,
+        settings["conditions"],
+        layout.entities(recording),
+        header.duration_s,
+        header.rate_hz,
+    )
+
+    raw = dataset.read_recording(settings["folder"], recording, settings["extension"], described)
+    photodiode = settings["flicker"]["photodiode"]
+    channels = dataset.choose_channels(raw, photodiode)
+    dataset.require_channels(raw, settings["regions"], photodiode)
     rate = tagging.exact_rate(raw.info["sfreq"])
     least = tagging.exact(settings["least_rate_hz"])
     factor = tagging.decimation_factor(rate, least)
@@ -23,12 +40,6 @@ def intake(inputs, outputs, settings):
     )
     dataset.check_scale(data_uv, raw)
     working = dataset.with_data(raw, data_uv, float(rate / factor))
-    trials = dataset.read_trials(
-        events,
-        settings["conditions"],
-        layout.entities(recording),
-        raw.n_times / float(rate),
-    )
 
     dataset.write_signal(working, outputs.signal)
     tables.write_table(outputs.trials, trials, ["trial", "condition", "onset_s", "duration_s"])

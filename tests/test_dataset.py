@@ -32,7 +32,7 @@ def test_events_become_trials_in_order_of_onset(events):
     path = events(
         "onset\tduration\ttrial_type\tvalue\n9.5\t4\tleft\tn/a\n2\tn/a\tother\t1.0\n5\t3\tleft\t7\n"
     )
-    trials = dataset.read_trials(path, CONDITIONS, {"task": "x"}, 20.0)
+    trials = dataset.read_trials(path, CONDITIONS, {"task": "x"}, 20.0, 100.0)
     assert [(t["trial"], t["condition"], t["onset_s"], t["duration_s"]) for t in trials] == [
         (1, "code", 2.0, 2.0),  # 1.0 is 1; the duration comes from the settings
         (2, "left", 5.0, 3.0),
@@ -42,10 +42,10 @@ def test_events_become_trials_in_order_of_onset(events):
 
 def test_a_whole_recording_can_be_a_trial():
     conditions = {"rest": {"events": {"task": "rest"}, "duration_s": None}}
-    (trial,) = dataset.read_trials(None, conditions, {"task": "rest"}, 61.0)
+    (trial,) = dataset.read_trials(None, conditions, {"task": "rest"}, 61.0, 100.0)
     assert (trial["onset_s"], trial["duration_s"]) == (0.0, 61.0)
     with pytest.raises(DataError, match=r"no events.tsv"):
-        dataset.read_trials(None, conditions, {"task": "other"}, 61.0)
+        dataset.read_trials(None, conditions, {"task": "other"}, 61.0, 100.0)
 
 
 @pytest.mark.parametrize(
@@ -61,7 +61,7 @@ def test_a_whole_recording_can_be_a_trial():
 )
 def test_events_that_cannot_be_used(events, text, expected):
     with pytest.raises(DataError, match=r".*") as caught:
-        dataset.read_trials(events(text), CONDITIONS, {}, 20.0)
+        dataset.read_trials(events(text), CONDITIONS, {}, 20.0, 100.0)
     assert expected in str(caught.value)
 
 

@@ -15,7 +15,7 @@ def dataset(tmp_path):
     """Make an empty dataset of the files named."""
 
     def make(*files):
-        for file in files:
+        for file in ("dataset_description.json", *files):
             path = tmp_path / file
             path.parent.mkdir(parents=True, exist_ok=True)
             path.touch()

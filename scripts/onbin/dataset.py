@@ -5,6 +5,7 @@ import math
 import warnings
 from collections.abc import Iterable, Mapping, Sequence
 from fractions import Fraction
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
@@ -12,7 +13,8 @@ import numpy as np
 
 from onbin import layout, tagging
 from onbin.errors import DataError
-from onbin.tables import MISSING, read_foreign
+from onbin.sidecars import Channel, nearest
+from onbin.tables import MISSING, read_numbered
 
 log = logging.getLogger("onbin")
 
@@ -22,10 +24,10 @@ BLOCK_SAMPLES = 50_000
 EEG_SCALE_UV = (0.01, 100_000.0)  # what a channel's spread can be, whatever the amplifier
 
 
-def read_recording(folder: str | Path, name: str, extension: str):
+def read_recording(folder: str | Path, name: str, extension: str, channels: Mapping[str, Channel]):
     """Open a recording as mne's Raw, without reading its samples.
 
-    Types, units and bad channels come from channels.tsv, positions from electrodes.tsv.
+    Positions come from electrodes.tsv.
 
     Parameters
     ----------
@@ -34,6 +36,8 @@ def read_recording(folder: str | Path, name: str, extension: str):
     name : str
         As in `layout.Recording`.
     extension : str
+    channels : mapping
+        Types and bad channels, as `sidecars.read_channels`.
 
     Raises
     ------
@@ -57,13 +61,17 @@ def read_recording(folder: str | Path, name: str, extension: str):
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
-            return mne_bids.read_raw_bids(path, verbose="error")
+            raw = mne_bids.read_raw_bids(path, on_ch_mismatch="warn", verbose="error")
     except Exception as error:  # readers raise whatever a damaged file leads them to
         first_line = next(iter(str(error).splitlines()), "") or type(error).__name__
         raise DataError(
             f"{path.fpath} cannot be read ({first_line}). Check that the file is complete, or "
             "leave the recording out."
         ) from error
+    kinds = {name: channel.kind for name, channel in channels.items()}
+    raw.set_channel_types(kinds, on_unit_change="ignore", verbose="error")
+    raw.info["bads"] = [name for name, channel in channels.items() if channel.bad]
+    return raw
 
 
 def check_events(events: str | Path | None) -> None:
@@ -74,7 +82,7 @@ def check_events(events: str | Path | None) -> None:
     DataError
         If a column is missing or a time is no number.
     """
-    for number, row in enumerate(read_foreign(events) if events else [], start=2):
+    for number, row in read_numbered(events) if events else []:
         for column in ("onset", "duration"):
             _seconds(events, number, column, row)
 
@@ -132,11 +140,37 @@ def _positions(raw) -> set[str]:
     }
 
 
+def require_channels(
+    raw, regions: Mapping[str, Sequence[str]], photodiode: str | None = None
+) -> None:
+    """See that a recording has the channels that the settings name.
+
+    Raises
+    ------
+    DataError
+        If a region's channel is not among its EEG, or the photodiode's is not there.
+    """
+    eeg = eeg_names(raw)
+    for region, wanted in regions.items():
+        lacking = [name for name in wanted if name not in eeg]
+        if lacking:
+            raise DataError(
+                f"regions.{region}: the recording has no EEG channel {', '.join(lacking)}; it has "
+                f"{', '.join(eeg)}. Change regions in the settings, or leave the recording out."
+            )
+    if photodiode and photodiode not in raw.ch_names:
+        raise DataError(
+            f"flicker.photodiode: the recording has no channel {photodiode}; it has "
+            f"{', '.join(raw.ch_names)}. Change it in the settings, or leave the recording out."
+        )
+
+
 def read_trials(
     events: str | Path | None,
     conditions: Mapping[str, Mapping[str, Any]],
     entities: Mapping[str, str],
     recording_s: float,
+    rate_hz: float,
 ) -> list[dict[str, Any]]:
     """Find the trials of a recording.
 
@@ -150,6 +184,8 @@ def read_trials(
         BIDS entities of the recording.
     recording_s : float
         Length of the recording.
+    rate_hz : float
+        Its sampling rate: trials may reach out of it, or into each other, by one sample.
 
     Returns
     -------
@@ -159,9 +195,10 @@ def read_trials(
     Raises
     ------
     DataError
-        If no event belongs to a condition, or one cannot be understood.
+        If no event belongs to a condition, or one cannot be understood, lies outside the
+        recording or overlaps with another.
     """
-    rows = read_foreign(events) if events else []
+    rows = read_numbered(events) if events else []
     trials = []
     for name, condition in conditions.items():
         wanted = condition["events"]
@@ -170,8 +207,8 @@ def read_trials(
         if not all(_same(entities.get(key), value) for key, value in labels.items()):
             continue
         if not columns:
-            trials.append({"condition": name, "onset_s": 0.0, "duration_s": recording_s})
-        for number, row in enumerate(rows, start=2):
+            trials.append((f"conditions.{name}", name, 0.0, recording_s))
+        for number, row in rows:
             if columns and all(_same(row.get(key), value) for key, value in columns.items()):
                 onset_s = _seconds(events, number, "onset", row)
                 duration_s = _seconds(events, number, "duration", row) or condition["duration_s"]
@@ -179,11 +216,52 @@ def read_trials(
                     raise DataError(
                         f"{events}, line {number}: no duration; give conditions.{name}.duration_s."
                     )
-                trials.append({"condition": name, "onset_s": onset_s, "duration_s": duration_s})
+                trials.append((f"line {number}", name, onset_s, duration_s))
     if not trials:
-        raise DataError(_nothing_found(events, rows, conditions))
-    trials.sort(key=lambda trial: trial["onset_s"])
-    return [{"trial": number, **trial} for number, trial in enumerate(trials, start=1)]
+        raise DataError(_nothing_found(events, [row for _, row in rows], conditions, entities))
+    trials.sort(key=lambda trial: trial[2])
+    _check_places(events, trials, recording_s, 1 / rate_hz)
+    return [
+        {"trial": number, "condition": name, "onset_s": onset_s, "duration_s": duration_s}
+        for number, (_, name, onset_s, duration_s) in enumerate(trials, start=1)
+    ]
+
+
+def _check_places(
+    events: str | Path | None,
+    trials: Sequence[tuple[str, str, float, float]],
+    recording_s: float,
+    tolerance_s: float,
+) -> None:
+    """See that trials (place in the file, condition, onset, duration) lie apart and within."""
+    tolerance_s *= 1.001  # times in tables are rounded
+    for place, name, onset_s, duration_s in trials:
+        if onset_s < -tolerance_s or onset_s + duration_s > recording_s + tolerance_s:
+            raise DataError(
+                f"{events}, {place}: {name} lasts from {onset_s:g} to {onset_s + duration_s:g} s, "
+                f"the recording from 0 to {recording_s:g} s. Correct the event, or copy the "
+                "recording anew if its end is missing."
+            )
+    for (place, name, onset_s, duration_s), (next_place, next_name, next_onset_s, _) in pairwise(
+        trials
+    ):
+        if onset_s + duration_s <= next_onset_s + tolerance_s:
+            continue
+        if place == next_place:
+            raise DataError(
+                f"{events}, {place}: the event belongs to two conditions, {name} and {next_name}. "
+                "Give each condition events of its own in the settings."
+            )
+        if (name, onset_s) == (next_name, next_onset_s):
+            raise DataError(
+                f"{events}, {place} and {next_place}: {name} at {onset_s:g} s stands twice; keep "
+                "one."
+            )
+        raise DataError(
+            f"{events}, {place} and {next_place}: {name} lasts from {onset_s:g} to "
+            f"{onset_s + duration_s:g} s, but {next_name} begins at {next_onset_s:g} s. A window "
+            "would belong to both: correct their times, or take one away."
+        )
 
 
 def _same(found: str | None, wanted: str | int | float) -> bool:
@@ -215,10 +293,17 @@ def _seconds(events: str | Path | None, number: int, column: str, row: Mapping[s
 
 
 def _nothing_found(
-    events: str | Path | None, rows: Sequence[Mapping[str, str]], conditions: Mapping[str, Mapping]
+    events: str | Path | None,
+    rows: Sequence[Mapping[str, str]],
+    conditions: Mapping[str, Mapping],
+    entities: Mapping[str, str],
 ) -> str:
     if not events:
-        return "the recording has no events.tsv, and no condition takes whole recordings."
+        return (
+            "the recording has no events.tsv, and no condition takes whole recordings of "
+            f"{', '.join(f'{key}-{label}' for key, label in entities.items()) or 'this kind'}. Add "
+            "events.tsv, or compare with conditions in the settings."
+        )
     columns = sorted({key for c in conditions.values() for key in c["events"]})
     there = []
     for column in columns:
@@ -226,13 +311,15 @@ def _nothing_found(
         if values:
             there.append(f"{column}: {', '.join(values[:12])}{' ...' if len(values) > 12 else ''}")
     found = "; ".join(there) or (f"columns {', '.join(rows[0])}" if rows else "no rows")
-    return f"{events} has no event of any condition. It has {found}. Compare with conditions."
+    return (
+        f"{events} has no event of any condition. It has {found}. Compare with conditions in the "
+        "settings."
+    )
 
 
 def events_file(files: Iterable[str]) -> str | None:
     """Choose the events.tsv that is nearest to the recording."""
-    candidates = [path for path in files if path.endswith("events.tsv")]
-    return max(candidates, key=len, default=None)
+    return next(iter(nearest(files, "events.tsv")), None)
 
 
 def open_signal(path: str | Path):

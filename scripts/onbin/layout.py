@@ -6,7 +6,7 @@ Job graphs are built from this module, so it imports nothing heavy and reads fol
 import os
 import re
 from collections import defaultdict
-from collections.abc import Collection
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -20,6 +20,8 @@ EEG_FORMATS = (".vhdr", ".edf", ".bdf", ".set")
 ENTITIES = ("sub", "ses", "task", "acq", "run")
 RECORDING_PATTERN = r"sub-[A-Za-z0-9+]+(/ses-[A-Za-z0-9+]+)?/eeg/sub-[A-Za-z0-9+_-]+"
 PARTICIPANT_PATTERN = r"sub-[A-Za-z0-9+]+"
+# A file name has at most 255 bytes, and ours add up to 115 for what they hold and who makes them.
+LONGEST_NAME = 140
 
 # Every file of the results, by name. {recording} is such as sub-01/eeg/sub-01_task-panels and
 # {participant} such as sub-01. Each has a sidecar of the same name that ends in .json, but for the
@@ -184,7 +186,13 @@ def check_results(results: str | Path, folder: str | Path) -> None:
     SettingsError
         If they would, or if the folder cannot be made.
     """
-    place, dataset = Path(results).resolve(), Path(folder).resolve()
+    try:
+        place, dataset = Path(results).resolve(), Path(folder).resolve()
+    except (OSError, RuntimeError):  # the latter up to Python 3.12
+        raise SettingsError(
+            f"dataset.results: {results}, or the dataset {folder}, is a link that leads back to "
+            "itself. Choose another folder."
+        ) from None
     inside = place == dataset or dataset in place.parents
     if inside and dataset / "derivatives" not in place.parents:
         raise SettingsError(
@@ -218,7 +226,8 @@ def find_recordings(
     SettingsError
         If the folder is no dataset or holds no such recording.
     DataError
-        If a recording stands there in two formats.
+        If names are not those of BIDS, a recording stands there in two formats, or files are
+        links without content.
     """
     folder = Path(folder)
     if not folder.is_dir():
@@ -227,24 +236,26 @@ def find_recordings(
             f"dataset.folder: {folder} {found}; give the folder that holds sub-… folders and "
             "dataset_description.json."
         )
+    if not (folder / "dataset_description.json").is_file():
+        raise SettingsError(
+            f"dataset.folder: {folder} has no dataset_description.json, which BIDS requires; give "
+            "the folder that holds it, or write one with at least Name and BIDSVersion."
+        )
     wanted = {f"sub-{label}" for label in participants}
     present = participant_folders(folder)
     missing = sorted(wanted - set(present))
     if missing:
         raise SettingsError(
             f"dataset.participants: {folder} has no {', '.join(missing)}; it has "
-            f"{', '.join(present) or 'no sub-… folder'}."
+            f"{', '.join(present) or 'no sub-… folder'}. Labels stand there without sub-."
         )
     recordings = []
     shared = _data_files(folder)
     for subject in sorted(wanted or present):
         root = folder / subject
         inherited = shared + _data_files(root)
-        sessions = sorted(
-            e.name for e in os.scandir(root) if e.is_dir() and e.name.startswith("ses-")
-        )
         recordings += _in_folder(folder, root / "eeg", inherited)
-        for session in sessions:
+        for session in _folders(root, "ses-"):
             own = inherited + _data_files(root / session)
             recordings += _in_folder(folder, root / session / "eeg", own)
     if tasks:
@@ -261,13 +272,91 @@ def find_recordings(
             f"dataset.folder: {folder} has no EEG recording; expected files such as "
             f"sub-01/eeg/sub-01_task-x_eeg{EEG_FORMATS[0]} ({', '.join(EEG_FORMATS)})."
         )
+    _check_case([recording.name for recording in recordings])
+    _check_links([file for recording in recordings for file in recording.files], folder)
     return recordings
 
 
 def participant_folders(folder: str | Path) -> list[str]:
     """Participants that have a folder in the dataset, with sub-."""
-    found = (e.name for e in os.scandir(folder) if e.is_dir() and e.name.startswith("sub-"))
-    return sorted(found)
+    return _folders(Path(folder), "sub-")
+
+
+def _names(folder: Path) -> list[str]:
+    try:
+        return sorted(os.listdir(folder))
+    except PermissionError:
+        raise SettingsError(f"{folder} cannot be listed; ask for the right to read it.") from None
+
+
+def _folders(parent: Path, prefix: str) -> list[str]:
+    """Names of the folders that begin with a prefix; a file of such a name is a mistake."""
+    names = [name for name in _names(parent) if name.startswith(prefix)]
+    for name in names:
+        if not (parent / name).is_dir() and "." not in name:
+            _refuse_no_folder(parent / name)
+    return [name for name in names if (parent / name).is_dir()]
+
+
+def _refuse_no_folder(path: Path) -> None:
+    found = "is a file" if path.exists() else "is a link that leads nowhere"
+    raise DataError(f"{path} {found}, expected a folder; remove it from the dataset.")
+
+
+def _check_case(recordings: Sequence[str]) -> None:
+    """BIDS forbids names that differ in case alone: on many disks they are the same."""
+    seen: dict[str, str] = {}
+    for name in recordings:
+        other = seen.setdefault(name.casefold(), name)
+        if other != name:
+            raise DataError(
+                f"{other} and {name} differ by capital letters only, which BIDS forbids; rename "
+                "one, or choose with dataset.participants."
+            )
+
+
+def _check_links(files: Sequence[str], folder: Path) -> None:
+    """A dataset may be links to files that are fetched later, one by one."""
+    broken = sorted({file for file in files if os.path.islink(file) and not os.path.exists(file)})
+    if broken:
+        first, target = broken[0], os.readlink(broken[0])
+        others = f" and {len(broken) - 1} more" if len(broken) > 1 else ""
+        if ".git/annex/" in target:
+            raise DataError(
+                f"{first}{others}: the content was not fetched. Fetch it with `datalad get` or "
+                f"`git annex get` in {folder}, or choose others with dataset.participants."
+            )
+        raise DataError(
+            f"{first}{others}: a link to {target}, which leads nowhere. Put the file there, or "
+            "choose others with dataset.participants."
+        )
+
+
+def _check_name(name: str) -> None:
+    """See that a recording's name is one of BIDS that results can be named after."""
+    stem = name.rsplit("/", 1)[-1]
+    found = entities(name)
+    advice = "Rename its files, or leave the recording out with dataset.participants or tasks."
+    if not re.fullmatch(RECORDING_PATTERN, name) or not all(
+        re.fullmatch(r"[a-z]+-[A-Za-z0-9+]+", part) for part in stem.split("_")
+    ):
+        raise DataError(
+            f"{name}_eeg: expected a name of entities and labels of letters and digits, such as "
+            f"sub-01_task-x_run-1_eeg. {advice}"
+        )
+    unknown = [key for key in found if key not in ENTITIES]
+    if unknown or "task" not in found:
+        what = f"the entity {unknown[0]}- is not known here" if unknown else "there is no task-"
+        raise DataError(f"{name}_eeg: {what}; expected {'-, '.join(ENTITIES)}-. {advice}")
+    if [f"{key}-{found[key]}" for key in ("sub", "ses") if key in found] != name.split("/")[:-2]:
+        raise DataError(
+            f"{name}_eeg: sub- and ses- of the name are not those of its folder. {advice}"
+        )
+    if len(stem) > LONGEST_NAME:
+        raise DataError(
+            f"{name}_eeg: the name has {len(stem)} characters, expected at most {LONGEST_NAME}, "
+            f"since names of results are made from it. {advice}"
+        )
 
 
 def _data_files(folder: Path) -> list[str]:
@@ -275,13 +364,15 @@ def _data_files(folder: Path) -> list[str]:
     if not folder.is_dir():
         return []
     pattern = re.compile(r"(?:.*_)?(?:eeg|events|channels|electrodes|coordsystem)\.(?:json|tsv)$")
-    return sorted(e.path for e in os.scandir(folder) if pattern.match(e.name))
+    return [str(folder / name) for name in _names(folder) if pattern.match(name)]
 
 
 def _in_folder(dataset: Path, folder: Path, inherited: list[str]) -> list[Recording]:
     if not folder.is_dir():
+        if os.path.lexists(folder):
+            _refuse_no_folder(folder)
         return []
-    names = sorted(entry.name for entry in os.scandir(folder))
+    names = _names(folder)
     stems: dict[str, list[str]] = defaultdict(list)
     for name in names:
         for extension in EEG_FORMATS:
@@ -289,6 +380,7 @@ def _in_folder(dataset: Path, folder: Path, inherited: list[str]) -> list[Record
                 stems[name.removesuffix(f"_eeg{extension}")].append(extension)
     recordings = []
     for stem, extensions in stems.items():
+        _check_name((folder / stem).relative_to(dataset).as_posix())
         if len(extensions) > 1:
             raise DataError(
                 f"{folder}/{stem}_eeg stands there as {' and '.join(extensions)}; "

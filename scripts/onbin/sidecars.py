@@ -1,0 +1,279 @@
+"""What a dataset says beside a recording's data file: eeg.json and channels.tsv, checked."""
+
+import json
+import logging
+import math
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from onbin import layout
+from onbin.errors import DataError
+from onbin.headers import Header
+from onbin.tables import MISSING, read_foreign, read_numbered
+
+log = logging.getLogger("onbin")
+
+# Types of channels.tsv in BIDS 1.10, and what mne calls those that are kept.
+KEPT_TYPES = {
+    "EEG": "eeg", "EOG": "eog", "HEOG": "eog", "VEOG": "eog", "ECG": "ecg",
+}  # fmt: skip
+OTHER_TYPES = (
+    "ACCEL", "ADC", "ANGACC", "AUDIO", "DAC", "DBS", "ECOG", "EMG", "EYEGAZE", "FITERR", "GSR",
+    "GYRO", "HLU", "JNTANG", "LATENCY", "MAGN", "MEGGRADAXIAL", "MEGGRADPLANAR", "MEGMAG",
+    "MEGOTHER", "MEGREFGRADAXIAL", "MEGREFGRADPLANAR", "MEGREFMAG", "MISC", "NIRSCWAMPLITUDE",
+    "NIRSCWFLUORESCENSEAMPLITUDE", "NIRSCWHBO", "NIRSCWHBR", "NIRSCWMUA", "NIRSCWOPTICALDENSITY",
+    "ORNT", "OTHER", "POS", "PPG", "PUPIL", "REF", "RESP", "SEEG", "SYSCLOCK", "TEMP", "TRIG",
+    "VEL",
+)  # fmt: skip
+STATUSES = ("good", "bad", MISSING, "")
+TRIGGERS = "Status"  # BDF's own channel of triggers, which lists of channels often leave out
+DURATION_TOLERANCE_S = 1.0  # durations in sidecars are often rounded to seconds
+RATE_TOLERANCE = 1e-3  # BrainVision rounds the sampling interval, to whole µs in many programs
+
+
+@dataclass(frozen=True)
+class Channel:
+    """A row of channels.tsv: its type as mne calls it, and whether it is marked as bad."""
+
+    kind: str
+    bad: bool
+
+
+def nearest(files: Iterable[str], suffix: str) -> list[str]:
+    """Files of a kind that apply to a recording, the most specific first (BIDS inheritance)."""
+    of_kind = [p for p in files if Path(p).name == suffix or p.endswith(f"_{suffix}")]
+    return sorted(of_kind, key=lambda p: (p.count("/"), p.count("_"), p), reverse=True)
+
+
+def read_eeg_json(files: Iterable[str], recording: str) -> dict[str, Any]:
+    """Read what applies of eeg.json: each key from the file that is nearest to the recording.
+
+    Raises
+    ------
+    DataError
+        If there is no such file, or one is not JSON.
+    """
+    paths = nearest(files, "eeg.json")
+    if not paths:
+        raise DataError(
+            f"no eeg.json applies to {recording}; BIDS requires one. Write {recording}_eeg.json "
+            "with at least TaskName, EEGReference, SamplingFrequency, PowerLineFrequency and "
+            "SoftwareFilters."
+        )
+    merged: dict[str, Any] = {}
+    for path in reversed(paths):
+        merged |= read_json(path)
+    return merged
+
+
+def read_json(path: str | Path) -> dict[str, Any]:
+    """Read a JSON object.
+
+    Raises
+    ------
+    DataError
+        If the file holds anything else.
+    """
+    try:
+        text = Path(path).read_text(encoding="utf-8")
+    except UnicodeDecodeError:
+        raise DataError(f"{path} is not text in UTF-8; save it as UTF-8.") from None
+    if text.startswith("\ufeff"):  # RFC 8259, section 8.1; readers that come later stumble over it
+        raise DataError(
+            f"{path} begins with a byte-order mark, which JSON must not have; save it as UTF-8 "
+            "without one."
+        )
+    try:
+        found = json.loads(text)
+    except json.JSONDecodeError as error:
+        raise DataError(
+            f"{path}, line {error.lineno}, column {error.colno}: is not valid JSON ({error.msg}); "
+            "correct it."
+        ) from None
+    except RecursionError:
+        raise DataError(f"{path} is nested too deeply; correct it.") from None
+    if not isinstance(found, dict):
+        kind = "a list" if isinstance(found, list) else repr(found)[:40]
+        raise DataError(f'{path} holds {kind}, expected {{"key": value, ...}}; correct it.')
+    return found
+
+
+def check_eeg_json(told: Mapping[str, Any], header: Header, line_hz: float | None) -> float | None:
+    """See that eeg.json has what is needed of it and agrees with the data file.
+
+    Parameters
+    ----------
+    told : mapping
+        As `read_eeg_json`.
+    header : Header
+    line_hz : float, optional
+        Frequency of the mains from the settings, which goes before PowerLineFrequency.
+
+    Returns
+    -------
+    float or None
+        PowerLineFrequency.
+
+    Raises
+    ------
+    DataError
+    """
+    rate_hz = _positive(told, "SamplingFrequency", header)
+    if rate_hz is None:
+        raise DataError(_lacks("SamplingFrequency", header, f"add it ({header.rate_hz:g})"))
+    if abs(rate_hz / header.rate_hz - 1) > RATE_TOLERANCE:
+        raise DataError(
+            f"{header.path}: the data file has {header.rate_hz:g} samples a second, "
+            f"SamplingFrequency in eeg.json is {rate_hz:g}. Correct whichever is wrong."
+        )
+    told_line_hz = _positive(told, "PowerLineFrequency", header)
+    if line_hz is None and told_line_hz is None:
+        if "PowerLineFrequency" not in told:
+            raise DataError(
+                _lacks("PowerLineFrequency", header, "add it, or give filter.line_hz in settings")
+            )
+        log.warning("PowerLineFrequency is n/a: no mains hum is taken out")
+    _check_duration(_positive(told, "RecordingDuration", header), header)
+    return told_line_hz
+
+
+def _check_duration(duration_s: float | None, header: Header) -> None:
+    if duration_s is None:
+        return
+    missing_s = duration_s - header.duration_s
+    tolerance_s = max(DURATION_TOLERANCE_S, header.record_s)
+    if missing_s > tolerance_s:
+        raise DataError(
+            f"{header.path}: the data file has {header.duration_s:g} s, RecordingDuration in "
+            f"eeg.json is {duration_s:g} s: the end is missing. Copy the recording anew, or "
+            "correct RecordingDuration if nothing is missing."
+        )
+    if -missing_s > tolerance_s:
+        log.warning(
+            "the data file has %g s, RecordingDuration is %g s", header.duration_s, duration_s
+        )
+
+
+def _lacks(key: str, header: Header, advice: str) -> str:
+    return f"{header.path}: its eeg.json has no {key}, which BIDS requires; {advice}."
+
+
+def _positive(told: Mapping[str, Any], key: str, header: Header) -> float | None:
+    value = told.get(key)
+    if value is None or value == MISSING:
+        return None
+    is_number = isinstance(value, int | float) and not isinstance(value, bool)
+    if not is_number or not 0 < value < math.inf:
+        raise DataError(
+            f"{header.path}: {key} in its eeg.json is {value!r}, expected a number above 0; "
+            "correct it."
+        )
+    return float(value)
+
+
+def read_channels(files: Iterable[str], header: Header) -> dict[str, Channel]:
+    """Read the channels.tsv that applies to a recording; nothing where there is none.
+
+    Raises
+    ------
+    DataError
+        If it cannot be understood, or tells of other channels than the data file has.
+    """
+    for name in header.channels:
+        if header.channels.count(name) > 1:
+            raise DataError(
+                f"{header.path} has {header.channels.count(name)} channels that are called "
+                f"{name}. Export it anew with a name for each."
+            )
+    path = next(iter(nearest(files, "channels.tsv")), None)
+    if path is None:
+        log.warning("no channels.tsv: types are those of the data file, and no channel is bad")
+        return {}
+    rows = read_numbered(path)
+    for column in ("name", "type"):
+        if rows and column not in rows[0][1]:
+            raise DataError(
+                f"{path} has no column {column}, which BIDS requires; it has "
+                f"{', '.join(rows[0][1])}. Add it."
+            )
+    lines: dict[str, int] = {}
+    channels: dict[str, Channel] = {}
+    for number, row in rows:
+        name, kind, status = row["name"], row["type"].upper(), row.get("status", "").lower()
+        if name in lines:
+            raise DataError(
+                f"{path}: the channel {name} stands on line {lines[name]} and line {number}; keep "
+                "one, or give each its own name."
+            )
+        if kind not in KEPT_TYPES and kind not in OTHER_TYPES:
+            raise DataError(
+                f"{path}, line {number}: type is {row['type']!r}, expected one of BIDS, such as "
+                f"{', '.join(KEPT_TYPES)}, TRIG or MISC."
+            )
+        if status not in STATUSES:
+            raise DataError(
+                f"{path}, line {number}: status is {row['status']!r}, expected good, bad or n/a."
+            )
+        lines[name] = number
+        channels[name] = Channel(KEPT_TYPES.get(kind, "misc"), status == "bad")
+    absent = [name for name in channels if name not in header.channels]
+    unlisted = [n for n in header.channels if n not in channels and n != TRIGGERS]
+    if absent or unlisted:
+        raise DataError(
+            f"{path} and {header.path.name} have different channels: "
+            f"{', '.join(absent) or 'none'} in the table alone, {', '.join(unlisted) or 'none'} "
+            "in the data file alone. Give the table one row a channel, named as in the data file."
+        )
+    return channels
+
+
+def check_positions(files: Iterable[str]) -> None:
+    """See that electrodes.tsv and coordsystem.json can be read by those who place electrodes.
+
+    Raises
+    ------
+    DataError
+    """
+    files = list(files)
+    systems = nearest(files, "coordsystem.json")
+    for path in systems:
+        read_json(path)
+    for path in nearest(files, "electrodes.tsv"):
+        if not systems:
+            raise DataError(
+                f"{path}: no coordsystem.json says what its coordinates mean; BIDS requires it. "
+                "Add it, or take electrodes.tsv away to use the template's positions."
+            )
+        for number, row in read_numbered(path):
+            for column in ("name", "x", "y", "z"):
+                if column not in row:
+                    raise DataError(f"{path} has no column {column}, which BIDS requires; add it.")
+                if column != "name" and row[column] != MISSING and not _is_number(row[column]):
+                    raise DataError(
+                        f"{path}, line {number}: {column} is {row[column]!r}, expected a number "
+                        "or n/a; correct it."
+                    )
+
+
+def _is_number(text: str) -> bool:
+    try:
+        return math.isfinite(float(text))
+    except ValueError:
+        return False
+
+
+def check_people(folder: str | Path, recording: str) -> None:
+    """See that participants.tsv and scans.tsv can be read; others read them unasked.
+
+    Raises
+    ------
+    DataError
+    """
+    labels = layout.entities(recording)
+    own = Path(folder, f"sub-{labels['sub']}", f"ses-{labels['ses']}" if "ses" in labels else "")
+    stem = "_".join(f"{key}-{labels[key]}" for key in ("sub", "ses") if key in labels)
+    for path in (Path(folder) / "participants.tsv", own / f"{stem}_scans.tsv"):
+        if path.is_file():
+            read_foreign(path)
