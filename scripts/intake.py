@@ -10,7 +10,7 @@ def intake(inputs, outputs, settings):
     headers.require_files(inputs.files)
     header = headers.read_header(inputs.files[0])
     told = sidecars.read_eeg_json(inputs.files, recording)
-    sidecars.check_eeg_json(told, header, settings["filter"]["line_hz"])
+    line_hz = sidecars.check_eeg_json(told, header, settings["filter"]["line_hz"])
     described = sidecars.read_channels(inputs.files, header)
     sidecars.check_positions(inputs.files)
     sidecars.check_people(settings["folder"], recording)
@@ -24,7 +24,9 @@ def intake(inputs, outputs, settings):
         header.rate_hz,
     )
 
-    raw = dataset.read_recording(settings["folder"], recording, settings["extension"], described)
+    raw = dataset.read_recording(
+        settings["folder"], recording, settings["extension"], described, line_hz
+    )
     photodiode = settings["flicker"]["photodiode"]
     channels = dataset.choose_channels(raw, photodiode)
     dataset.require_channels(raw, settings["regions"], photodiode)

@@ -24,7 +24,13 @@ BLOCK_SAMPLES = 50_000
 EEG_SCALE_UV = (0.01, 100_000.0)  # what a channel's spread can be, whatever the amplifier
 
 
-def read_recording(folder: str | Path, name: str, extension: str, channels: Mapping[str, Channel]):
+def read_recording(
+    folder: str | Path,
+    name: str,
+    extension: str,
+    channels: Mapping[str, Channel],
+    line_hz: float | None,
+):
     """Open a recording as mne's Raw, without reading its samples.
 
     Positions come from electrodes.tsv.
@@ -38,6 +44,8 @@ def read_recording(folder: str | Path, name: str, extension: str, channels: Mapp
     extension : str
     channels : mapping
         Types and bad channels, as `sidecars.read_channels`.
+    line_hz : float, optional
+        Frequency of the mains.
 
     Raises
     ------
@@ -71,6 +79,7 @@ def read_recording(folder: str | Path, name: str, extension: str, channels: Mapp
     kinds = {name: channel.kind for name, channel in channels.items()}
     raw.set_channel_types(kinds, on_unit_change="ignore", verbose="error")
     raw.info["bads"] = [name for name, channel in channels.items() if channel.bad]
+    raw.info["line_freq"] = line_hz
     return raw
 
 

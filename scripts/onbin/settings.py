@@ -592,20 +592,21 @@ def _shown(value: Any) -> str:
 
 
 def _key_lines(node: yaml.Node | None, prefix: tuple = ()) -> Iterator[tuple[tuple, int]]:
-    """Yield (key path, line) of a YAML tree."""
+    """Yield (key path as texts, line) of a YAML tree."""
     if isinstance(node, yaml.MappingNode):
         for key, value in node.value:
-            where = (*prefix, getattr(key, "value", None))
+            where = (*prefix, str(key.value))
             yield where, key.start_mark.line + 1
             yield from _key_lines(value, where)
     elif isinstance(node, yaml.SequenceNode):
         for index, item in enumerate(node.value):
-            yield (*prefix, index), item.start_mark.line + 1
-            yield from _key_lines(item, (*prefix, index))
+            yield (*prefix, str(index)), item.start_mark.line + 1
+            yield from _key_lines(item, (*prefix, str(index)))
 
 
 def _line(where: tuple, lines: Mapping[tuple, int]) -> int:
     """Line of a key, or of the nearest part that holds it."""
+    where = tuple(map(str, where))
     while where and where not in lines:
         where = where[:-1]
     return lines.get(where, 1)
