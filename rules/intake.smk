@@ -20,6 +20,7 @@ rule intake:
             "flicker.photodiode",
             "filter.line_hz",
             "regions",
+            "sensors.reference",
             "conditions.*.events",
             "conditions.*.duration_s",
             folder=STUDY.dataset.folder,

@@ -29,7 +29,7 @@ def intake(inputs, outputs, settings):
     )
     photodiode = settings["flicker"]["photodiode"]
     channels = dataset.choose_channels(raw, photodiode)
-    dataset.require_channels(raw, settings["regions"], photodiode)
+    dataset.require_channels(raw, settings["regions"], settings["sensors"]["reference"], photodiode)
     rate = tagging.exact_rate(raw.info["sfreq"])
     least = tagging.exact(settings["least_rate_hz"])
     factor = tagging.decimation_factor(rate, least)

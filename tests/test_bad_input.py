@@ -11,12 +11,15 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from types import SimpleNamespace
 
+import components as components_step
 import intake as intake_step
 import numpy as np
 import pytest
 import realdata
+import sensors as sensors_step
+import spectra as spectra_step
 import yaml
-from onbin import layout, tables
+from onbin import arrays, dataset, layout, tables
 from onbin.errors import OnbinError, SettingsError
 from onbin.runner import run
 from onbin.settings import load_settings, part
@@ -140,10 +143,14 @@ class Study:
 
     root: Path
     label: str = "01"
-    settings: str = "study.yaml"
+    run: str = ""
+
+    @property
+    def name(self):
+        return f"sub-{self.label}/eeg/sub-{self.label}_task-x{self.run}"
 
     def at(self, suffix):
-        return self.root / f"sub-{self.label}" / "eeg" / f"sub-{self.label}_task-x_{suffix}"
+        return self.root / f"{self.name}_{suffix}"
 
     @property
     def data(self):
@@ -296,61 +303,58 @@ class Named:
 
 
 def settings_of(study, **changes):
-    path = study.root.parent / study.settings
+    path = study.root.parent / "study.yaml"
     raw = {**SETTINGS, "dataset": {"folder": str(study.root), "results": str(study.results)}}
     path.write_text(yaml.safe_dump(raw | changes, sort_keys=False))
     return load_settings(path)
 
 
-def job_of(step, study, recording, inputs, names, settings):
+def rule_of(step, file):
+    """Names of the outputs and of the parts of the settings that a rule gives its script."""
+    rule = (ROOT / "rules" / f"{file}.smk").read_text().split(f"rule {step}:")[1].split("rule ")[0]
+    outputs = re.search(rf'made\("{step}", ([^)]*)\)', rule)[1]
+    parts = rule.split("settings_part(")[1].split("folder=")[0].split(")")[0]
+    return re.findall(r'"(\w+)"', outputs), re.findall(r'"([\w.*]+)"', parts)
+
+
+def run_step(study, step, do, inputs, file="cleaning", own=(), **changes):
+    """Run a step with what its rule hands it; return its job."""
+    names, parts = rule_of(step, file)
     outputs = {
         name: layout.result(str(study.results), f"{step}_{name}").format(
-            recording=recording, participant=recording.split("/")[0]
+            recording=study.name, participant=f"sub-{study.label}"
         )
         for name in names
     }
-    return SimpleNamespace(
+    job = SimpleNamespace(
         input=Named(**inputs),
         output=Named(**outputs, sidecars=[layout.sidecar(path) for path in outputs.values()]),
-        params=Named(settings=settings),
-        log=[str(study.root.parent / "logs" / f"{step}.log")],
+        params=Named(settings=part(settings_of(study, **changes), *parts) | dict(own)),
+        log=[str(study.root.parent / "logs" / step / "log")],
         rule=step,
-        wildcards=Named(recording=recording),
+        wildcards=Named(recording=study.name),
     )
+    run(do, job)
+    return job
 
 
 def intake(study, **changes):
-    """Run the intake with what its rule hands it; return its job."""
     settings = settings_of(study, **changes)
     layout.check_results(settings.dataset.results, settings.dataset.folder)
     found = layout.find_recordings(settings.dataset.folder)
-    (recording,) = [r for r in found if r.participant == f"sub-{study.label}"]
-    rule = (ROOT / "rules" / "intake.smk").read_text().split("settings_part(")[1]
-    names = re.findall(r'"([\w.*]+)",', rule.split("folder=")[0])[1:]
+    (recording,) = [r for r in found if r.name == study.name]
     own = {
         "folder": settings.dataset.folder,
         "recording": recording.name,
         "extension": recording.extension,
     }
-    job = job_of(
-        "intake",
-        study,
-        recording.name,
-        {"files": list(recording.files)},
-        ["signal", "trials", "channels"],
-        part(settings, "intake", *names) | own,
-    )
-    run(intake_step.intake, job)
-    return job
+    inputs = {"files": list(recording.files)}
+    return run_step(study, "intake", intake_step.intake, inputs, "intake", own, **changes)
 
 
-def after_intake(study, step, do, inputs, names, *parts, **changes):
-    """Run a step on what another one left."""
-    settings = part(settings_of(study, **changes), *parts)
-    job = job_of(step, study, f"sub-{study.label}/eeg/sub-{study.label}_task-x", inputs, names,
-                 settings)  # fmt: skip
-    run(do, job)
-    return job.output
+def judge_sensors(study, taken_in, **changes):
+    inputs = {"signal": taken_in.output.signal, "recorded": taken_in.output.signal}
+    return run_step(study, "sensors", sensors_step.judge_sensors, inputs, **changes)
 
 
 def assert_plain(text, *words):
@@ -361,7 +365,7 @@ def assert_plain(text, *words):
         assert trace not in text
 
 
-def assert_refused(study, capfd, call, *words):
+def assert_refused(study, capfd, call, *words, step="desc-intake"):
     """The step ends with 1 and one message; nothing is left of its outputs."""
     with pytest.raises(SystemExit) as ended:
         call()
@@ -371,8 +375,8 @@ def assert_refused(study, capfd, call, *words):
     assert len(err.strip().splitlines()) == 1
     assert err.rstrip().endswith(".")
     assert_plain(err, *words)
-    left = [p for p in study.results.rglob("*") if not p.is_dir() or ".part-" in p.name]
-    assert left == []
+    left = [p.name for p in study.results.rglob("*") if p.is_file() or ".part-" in p.name]
+    assert [name for name in left if step in name or ".part-" in name] == []
 
 
 # --- recordings that cannot be used ---
@@ -645,7 +649,7 @@ def test_a_region_whose_channels_are_not_there(study, capfd):
     regions = SETTINGS["regions"] | {"parietal": ["Pz", "POz", "P3"]}
     assert_refused(
         study, capfd, lambda: intake(study, regions=regions),
-        "regions.parietal", "no EEG channel POz, P3", "it has Fp1, Fp2, Fz", "Change regions",
+        "regions.parietal", "no EEG channel POz, P3", "it has Fp1, Fp2, Fz", "Change",
     )  # fmt: skip
 
 
@@ -750,9 +754,7 @@ def test_line_frequency_from_the_settings(study):
 
 def test_an_inherited_line_frequency_reaches_the_signal(study):
     inherit_line_frequency(study)
-    from onbin.dataset import read_signal
-
-    assert read_signal(intake(study).output.signal).info["line_freq"] == 50
+    assert dataset.read_signal(intake(study).output.signal).info["line_freq"] == 50
 
 
 @pytest.mark.parametrize(
@@ -773,6 +775,122 @@ def test_bad_channels_and_types_reach_the_table(study):
     rows = {row["name"]: row for row in tables.read_table(intake(study).output.channels)}
     assert [name for name, row in rows.items() if row["status"] == "bad"] == ["Oz"]
     assert rows["HEOG"]["type"] == "EEG"  # as the damaged table says
+
+
+# --- what shows in a later step ---
+
+
+def only(*names, rate_hz=RATE_HZ):
+    """Make a BrainVision recording of other channels, or of another rate."""
+
+    def damage(study):
+        header = study.at("eeg.vhdr").read_text().split("[Channel Infos]")[0]
+        header = header.replace(f"Channels={len(CHANNELS)}", f"Channels={len(names)}")
+        header = header.replace(f"Interval={1e6 / RATE_HZ:g}", f"Interval={1e6 / rate_hz:g}")
+        listed = [f"Ch{i}={name},,{UV_PER_DIGIT},µV" for i, name in enumerate(names, start=1)]
+        study.at("eeg.vhdr").write_text("\n".join([header, "[Channel Infos]", *listed]))
+        samples = digits()[: len(names), : 30 * RATE_HZ]
+        study.at("eeg.eeg").write_bytes(samples.T.astype("<i2").tobytes())
+        channels(*(f"{name}\tEEG\tµV\tgood" for name in names))(study)
+        tell(SamplingFrequency=rate_hz, RecordingDuration=DURATION_S * RATE_HZ / rate_hz)(study)
+
+    return damage
+
+
+def second_run(study):
+    """Copy the recording as a second run of the same person."""
+    run = replace(study, run="_run-2")
+    for suffix in ("eeg.vhdr", "eeg.vmrk", "eeg.eeg", "eeg.json", "events.tsv", "channels.tsv"):
+        shutil.copy(study.at(suffix), run.at(suffix))
+    for suffix in ("eeg.vhdr", "eeg.vmrk"):
+        text = run.at(suffix).read_text().replace("task-x_eeg", "task-x_run-2_eeg")
+        run.at(suffix).write_text(text)
+    return run
+
+
+ALIKE = {"regions": {"occipital": ["A1", "A2"]}}
+
+
+def test_all_channels_bad(study, capfd):
+    change("channels.tsv", *(("\tgood", "\tbad"),) * len(CHANNELS))(study)
+    taken_in = intake(study)
+    assert_refused(
+        study, capfd, lambda: judge_sensors(study, taken_in),
+        "sensors: 8 of 8 channels are bad", "0 good ones", "leave the recording out",
+        step="desc-sensors",
+    )  # fmt: skip
+
+
+def test_one_channel_has_no_average(study, capfd):
+    only("Oz")(study)
+    assert_refused(
+        study, capfd, lambda: intake(study, regions={"occipital": ["Oz"]}),
+        "sensors.reference", "average", "Oz alone", "as_recorded",
+    )  # fmt: skip
+
+
+def test_a_reference_that_is_not_there(study, capfd):
+    assert_refused(
+        study, capfd, lambda: intake(study, sensors={"reference": ["TP9", "Fz"]}),
+        "sensors.reference", "no EEG channel TP9", "it has Fp1", "Change",
+    )  # fmt: skip
+
+
+def test_one_channel_alone_goes_through(study):
+    only("Oz")(study)
+    changes = {"regions": {"occipital": ["Oz"]}, "sensors": {"reference": "as_recorded"}}
+    judged = judge_sensors(study, intake(study, **changes), **changes)
+    assert [r["verdict"] for r in tables.read_table(judged.output.verdicts)] == ["good"]
+    inputs = {"signal": judged.output.signal, "sensors": judged.output.verdicts}
+    separated = run_step(study, "components", components_step.separate, inputs, **changes)
+    assert tables.read_table(separated.output.verdicts) == []
+    assert arrays.read(separated.output.ica)["maps"].shape[1] == 0
+    assert "too few to separate" in log_of(separated)
+
+
+def test_channels_without_positions_go_through(study):
+    only(*(f"A{n}" for n in range(1, 9)))(study)
+    taken_in = intake(study, **ALIKE)
+    assert {r["position"] for r in tables.read_table(taken_in.output.channels)} == {"none"}
+    assert "no position for A1, A2" in log_of(taken_in)
+    judged = judge_sensors(study, taken_in, **ALIKE)
+    assert {r["verdict"] for r in tables.read_table(judged.output.verdicts)} == {"good"}
+
+
+def test_a_bad_channel_without_a_position_is_left_out_and_named(study):
+    only(*(f"A{n}" for n in range(1, 9)))(study)
+    change("channels.tsv", ("A3\tEEG\tµV\tgood", "A3\tEEG\tµV\tbad"))(study)
+    judged = judge_sensors(study, intake(study, **ALIKE), **ALIKE)
+    assert "A3 left out: bad, and without a position" in log_of(judged)
+    assert "A3" not in dataset.read_signal(judged.output.signal).ch_names
+
+
+def test_runs_of_one_person_with_different_rates(study, capfd):
+    runs = [study, second_run(study)]
+    only("Fz", "Cz", "O1", "Oz", "O2", rate_hz=250)(runs[1])
+    events("2\t8\tleft", "12\t8\tright")(runs[1])
+    inputs = {"signals": [intake(run).output.signal for run in runs], "verdicts": [], "flicker": []}
+    own = {"recordings": [run.name for run in runs]}
+    assert_refused(
+        study, capfd,
+        lambda: run_step(
+            study, "spectra", spectra_step.measure_spectra, inputs, "measures", own
+        ),
+        "different working rates", "sub-01_task-x: 200 Hz", "run-2: 250 Hz",
+        "intake.working_rate_hz", step="desc-terms",
+    )  # fmt: skip
+
+
+def test_runs_of_one_person_with_different_names(study, capfd):
+    """A name in other letters is another channel, told where it is first missed."""
+    run = second_run(study)
+    only("FZ", "CZ", "PZ", "O1", "OZ", "O2")(run)
+    assert intake(study).output
+    assert_refused(
+        replace(run, root=study.root), capfd, lambda: intake(run),
+        "run-2", "regions.occipital", "no EEG channel Oz", "it has FZ, CZ, PZ, O1, OZ, O2",
+        step="run-2_desc-intake",
+    )  # fmt: skip
 
 
 # --- datasets ---

@@ -123,7 +123,10 @@ def choose_channels(raw, photodiode: str | None = None) -> list[dict[str, Any]]:
     if not given:
         source = "template"
         montage = mne.channels.make_standard_montage(TEMPLATE_MONTAGE)
-        raw.set_montage(montage, match_case=False, on_missing="ignore", verbose="error")
+        known = {name.lower() for name in montage.ch_names}
+        # where few names are known they mean others: A1 of an A-to-D cap is no ear lobe
+        if 2 * sum(name.lower() in known for name in eeg) >= len(eeg):
+            raw.set_montage(montage, match_case=False, on_missing="ignore", verbose="error")
         given = _positions(raw)
     without = [name for name in eeg if name not in given]
     if without:
@@ -150,23 +153,43 @@ def _positions(raw) -> set[str]:
 
 
 def require_channels(
-    raw, regions: Mapping[str, Sequence[str]], photodiode: str | None = None
+    raw,
+    regions: Mapping[str, Sequence[str]],
+    reference: str | Sequence[str],
+    photodiode: str | None,
 ) -> None:
     """See that a recording has the channels that the settings name.
+
+    Parameters
+    ----------
+    raw : mne.io.Raw
+    regions : mapping
+        Channels by region.
+    reference : str or sequence of str
+        As ``sensors.reference``.
+    photodiode : str, optional
 
     Raises
     ------
     DataError
-        If a region's channel is not among its EEG, or the photodiode's is not there.
+        If one is not there.
     """
     eeg = eeg_names(raw)
-    for region, wanted in regions.items():
-        lacking = [name for name in wanted if name not in eeg]
+    wanted = {f"regions.{region}": channels for region, channels in regions.items()}
+    if not isinstance(reference, str):
+        wanted["sensors.reference"] = reference
+    for key, names in wanted.items():
+        lacking = [name for name in names if name not in eeg]
         if lacking:
             raise DataError(
-                f"regions.{region}: the recording has no EEG channel {', '.join(lacking)}; it has "
-                f"{', '.join(eeg)}. Change regions in the settings, or leave the recording out."
+                f"{key}: the recording has no EEG channel {', '.join(lacking)}; it has "
+                f"{', '.join(eeg)}. Change {key} in the settings, or leave the recording out."
             )
+    if reference == "average" and len(eeg) == 1:
+        raise DataError(
+            f"sensors.reference: against the average of one channel, {eeg[0]} alone, nothing is "
+            "left. Set it to as_recorded."
+        )
     if photodiode and photodiode not in raw.ch_names:
         raise DataError(
             f"flicker.photodiode: the recording has no channel {photodiode}; it has "
