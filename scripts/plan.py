@@ -1,11 +1,9 @@
 """The flicker plan: where every term of every tag lies, what that costs, and what to do."""
 
-import json
-from functools import cache
 from pathlib import Path
 
-from onbin import filtering, layout, plan, plan_page, tables
-from onbin.errors import DataError, SettingsError
+from onbin import filtering, layout, plan, plan_page, sidecars, tables
+from onbin.errors import SettingsError
 from onbin.plan import Recorded
 from onbin.runner import run
 
@@ -62,42 +60,19 @@ def filter_gains(settings, setup):
 
 
 def read_metadata(files):
-    """What the JSON files that apply to a recording tell; the most specific goes first.
-
-    ``files`` are those of `layout.Recording`: its own folder's first, then the inherited ones from
-    the top of the dataset down.
-    """
-    recording = Path(files[0]).parent
-    own, inherited = [], []
-    for path in files:
-        (own if Path(path).parent == recording else inherited).append(path)
-    told = {"eeg": {}, "events": {}}
-    for path in [*inherited, *sorted(own, key=len)]:  # a name with more entities is more specific
-        kind = Path(path).stem.rsplit("_", 1)[-1]
-        if path.endswith(".json") and kind in told:
-            told[kind] |= _read_json(path)
-    screen = told["events"].get("StimulusPresentation")
+    """What the JSON files that apply to a recording tell; ``files`` are those of its layout."""
+    told = sidecars.merged(files, "eeg.json")
+    screen = sidecars.merged(files, "events.json").get("StimulusPresentation")
     screen = screen if isinstance(screen, dict) else {}
     size = screen.get("ScreenSize")
     size_m = tuple(map(_positive, size)) if isinstance(size, list) and len(size) == 2 else (None,)
     return Recorded(
-        rate_hz=_positive(told["eeg"].get("SamplingFrequency")),
-        line_hz=_positive(told["eeg"].get("PowerLineFrequency")),
+        rate_hz=_positive(told.get("SamplingFrequency")),
+        line_hz=_positive(told.get("PowerLineFrequency")),
         refresh_hz=_positive(screen.get("ScreenRefreshRate")),
         distance_m=_positive(screen.get("ScreenDistance")),
         size_m=size_m if all(size_m) else None,
     )
-
-
-@cache
-def _read_json(path):
-    try:
-        read = json.loads(Path(path).read_text(encoding="utf-8-sig"))
-    except ValueError as error:
-        raise DataError(f"{path} is not valid JSON ({error}); correct it.") from None
-    if not isinstance(read, dict):
-        raise DataError(f"{path} holds no JSON object; expected {{...}} with keys and values.")
-    return read
 
 
 def _positive(value):

@@ -313,7 +313,7 @@ def rule_of(step, file):
     """Names of the outputs and of the parts of the settings that a rule gives its script."""
     rule = (ROOT / "rules" / f"{file}.smk").read_text().split(f"rule {step}:")[1].split("rule ")[0]
     outputs = re.search(rf'made\("{step}", ([^)]*)\)', rule)[1]
-    parts = rule.split("settings_part(")[1].split("folder=")[0].split(")")[0]
+    parts = re.split(r"\*\*|\w+=|\)", rule.split("settings_part(")[1])[0]
     return re.findall(r'"(\w+)"', outputs), re.findall(r'"([\w.*]+)"', parts)
 
 
@@ -354,7 +354,8 @@ def intake(study, **changes):
 
 def judge_sensors(study, taken_in, **changes):
     inputs = {"signal": taken_in.output.signal, "recorded": taken_in.output.signal}
-    return run_step(study, "sensors", sensors_step.judge_sensors, inputs, **changes)
+    own = {"decisions": [], "decisions_file": "decisions.tsv", "recording": Path(study.name).name}
+    return run_step(study, "sensors", sensors_step.judge_sensors, inputs, own=own, **changes)
 
 
 def assert_plain(text, *words):
@@ -842,8 +843,9 @@ def test_one_channel_alone_goes_through(study):
     judged = judge_sensors(study, intake(study, **changes), **changes)
     assert [r["verdict"] for r in tables.read_table(judged.output.verdicts)] == ["good"]
     inputs = {"signal": judged.output.signal, "sensors": judged.output.verdicts}
-    separated = run_step(study, "components", components_step.separate, inputs, **changes)
-    assert tables.read_table(separated.output.verdicts) == []
+    own = {"recording": Path(study.name).name}
+    separated = run_step(study, "components", components_step.separate, inputs, own=own, **changes)
+    assert tables.read_table(separated.output.evidence) == []
     assert arrays.read(separated.output.ica)["maps"].shape[1] == 0
     assert "too few to separate" in log_of(separated)
 

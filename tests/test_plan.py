@@ -351,6 +351,7 @@ def dataset(tmp_path):
     screen = {"ScreenRefreshRate": 60, "ScreenDistance": 0.6, "ScreenSize": [0.5, 0.3]}
     own = {"StimulusPresentation": screen | {"ScreenRefreshRate": 59.94, "ScreenDistance": "n/a"}}
     files = {
+        "dataset_description.json": {"Name": "x", "BIDSVersion": "1.10.0"},
         "task-x_events.json": {"StimulusPresentation": screen},
         "task-x_eeg.json": {"SamplingFrequency": 512, "PowerLineFrequency": 50},
         "sub-2/eeg/sub-2_task-x_events.json": own,
@@ -372,7 +373,7 @@ def test_metadata_are_inherited_and_the_nearest_goes_first(dataset):
 
 def test_damaged_metadata_are_named(dataset):
     (dataset / "task-x_eeg.json").write_text("{")
-    with pytest.raises(DataError, match=r"task-x_eeg.json is not valid JSON"):
+    with pytest.raises(DataError, match=r"task-x_eeg.json, line 1, column 2: is not valid JSON"):
         script.read_metadata(layout.find_recordings(dataset)[0].files)
 
 

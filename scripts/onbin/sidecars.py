@@ -47,25 +47,35 @@ def nearest(files: Iterable[str], suffix: str) -> list[str]:
     return sorted(of_kind, key=lambda p: (p.count("/"), p.count("_"), p), reverse=True)
 
 
+def merged(files: Iterable[str], suffix: str) -> dict[str, Any]:
+    """Read the JSON files of a kind that apply; each key from the most specific that has it.
+
+    Raises
+    ------
+    DataError
+        If one is not JSON.
+    """
+    told: dict[str, Any] = {}
+    for path in reversed(nearest(files, suffix)):
+        told |= read_json(path)
+    return told
+
+
 def read_eeg_json(files: Iterable[str], recording: str) -> dict[str, Any]:
-    """Read what applies of eeg.json: each key from the file that is nearest to the recording.
+    """Read what applies to a recording of eeg.json.
 
     Raises
     ------
     DataError
         If there is no such file, or one is not JSON.
     """
-    paths = nearest(files, "eeg.json")
-    if not paths:
+    if not nearest(files, "eeg.json"):
         raise DataError(
             f"no eeg.json applies to {recording}; BIDS requires one. Write {recording}_eeg.json "
             "with at least TaskName, EEGReference, SamplingFrequency, PowerLineFrequency and "
             "SoftwareFilters."
         )
-    merged: dict[str, Any] = {}
-    for path in reversed(paths):
-        merged |= read_json(path)
-    return merged
+    return merged(files, "eeg.json")
 
 
 def read_json(path: str | Path) -> dict[str, Any]:
