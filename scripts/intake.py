@@ -1,7 +1,11 @@
 """Read a raw BIDS recording: EEG with positions, trials in the study's terms, working rate."""
 
+import logging
+
 from onbin import dataset, filtering, headers, layout, sidecars, tables, tagging
 from onbin.runner import run
+
+log = logging.getLogger("onbin")
 
 
 def intake(inputs, outputs, settings):
@@ -13,6 +17,7 @@ def intake(inputs, outputs, settings):
     line_hz = sidecars.check_eeg_json(told, header, settings["filter"]["line_hz"])
     described = sidecars.read_channels(inputs.files, header)
     sidecars.check_positions(inputs.files)
+    sidecars.merged(inputs.files, "events.json")
     sidecars.check_people(settings["folder"], recording)
     events = dataset.events_file(inputs.files)
     dataset.check_events(events)
@@ -29,6 +34,10 @@ def intake(inputs, outputs, settings):
     )
     photodiode = settings["flicker"]["photodiode"]
     channels = dataset.choose_channels(raw, photodiode)
+    if sidecars.nearest(inputs.files, "electrodes.tsv") and all(
+        row["position"] != "dataset" for row in channels
+    ):
+        log.warning("no position of electrodes.tsv could be used; see EEGCoordinateSystem")
     dataset.require_channels(raw, settings["regions"], settings["sensors"]["reference"], photodiode)
     rate = tagging.exact_rate(raw.info["sfreq"])
     least = tagging.exact(settings["least_rate_hz"])

@@ -23,6 +23,7 @@ from onbin import arrays, dataset, layout, tables
 from onbin.errors import OnbinError, SettingsError
 from onbin.runner import run
 from onbin.settings import load_settings, part
+from scipy.io import savemat
 
 ROOT = Path(__file__).parents[1]
 RATE_HZ, DURATION_S = 200, 30
@@ -425,7 +426,7 @@ def all_rows(kind="EEG", status="good"):
     return [f"{name}\t{kind}\tµV\t{status}" for name in CHANNELS]
 
 
-WRONG_UNITS = ("expected 0.01 to 100000", "units", "volts")
+WRONG_UNITS = ("expected 0.01 to 100000", "unit in the data file", "volts")
 BAD_RECORDINGS = {
     # the data file
     "brainvision_truncated": (
@@ -467,7 +468,8 @@ BAD_RECORDINGS = {
     "edf_cut_within_its_header": (
         "02", of("02", cut("eeg.edf", 0.005)), ["9 signals", "header of 2560 bytes", "anew"]),
     "edf_that_is_another_file": (
-        "02", of("02", write("eeg.edf", "PK\x03\x04 zipped" * 99)), ["begins with", "no EDF file"]),
+        "02", of("02", write("eeg.edf", "PK\x03\x04 zipped" * 99)),
+        ["does not begin as a file of EDF", "PK", "anew"]),
     "edf_line_ends_changed": (
         "02", of("02", mangle(b"\n", b"\r\n")), ["eeg.edf", "as if it were text", "binary mode"]),
     "edf_line_ends_changed_and_cut_to_length": (
@@ -493,7 +495,20 @@ BAD_RECORDINGS = {
         "03", of("03", cut("eeg.bdf", 0.7)), ["eeg.bdf", "30 data records, 30 s", "20", "anew"]),
     "bdf_of_zero_length": ("03", of("03", write("eeg.bdf", "")), ["eeg.bdf is empty", "anew"]),
     "bdf_that_is_an_edf": (
-        "03", of("03", patch("eeg.bdf", 0, "0       ")), ["begins with b'0", "no BDF file"]),
+        "03", of("03", patch("eeg.bdf", 0, "0       ")),
+        ["does not begin as a file of BDF", "found '0", "anew"]),
+    "edf_limit_that_is_no_number": (
+        "02", of("02", patch("eeg.edf", 256 + 9 * 104, "lots    ")),
+        ["a limit of Fp1 is 'lots'", "expected a number", "anew"]),
+    "edf_limits_that_are_alike": (
+        "02", of("02", patch("eeg.edf", 256 + 9 * 120, "32767   ")),
+        ["lower and the upper limit of Fp1", "32767", "anew"]),
+    "brainvision_resolution_of_zero": (
+        "01", change("eeg.vhdr", (f"Ch1=Fp1,,{UV_PER_DIGIT}", "Ch1=Fp1,,0")),
+        ["resolution of Fp1 is '0'", "other than 0", "anew"]),
+    "brainvision_marker_that_is_none": (
+        "01", change("eeg.vmrk", ("Infos]\n", "Infos]\nMk1=Stimulus,S1,soon,1,0\n")),
+        ["eeg.vhdr cannot be read", "the log tells", "Export"]),
     "data_file_is_a_folder": (
         "02", lambda s: (of("02", remove("eeg.edf"))(s), of("02", lambda t: t.data.mkdir())(s)),
         ["eeg.edf cannot be read", "directory", "is a file"]),
@@ -523,6 +538,12 @@ BAD_RECORDINGS = {
         "01", tell(PowerLineFrequency=None), ["no PowerLineFrequency", "add it", "filter.line_hz"]),
     "power_line_frequency_below_zero": (
         "01", tell(PowerLineFrequency=-50), ["PowerLineFrequency", "-50", "number above 0"]),
+    "epochs_in_place_of_a_recording": (
+        "01", tell(RecordingType="epoched"), ["RecordingType", "epoched", "expected continuous"]),
+    "duration_as_text": (
+        "01", tell(RecordingDuration="long"), ["RecordingDuration", "'long'", "number above 0"]),
+    "events_json_that_is_a_list": (
+        "01", write("events.json", "[]"), ["events.json holds a list", "correct it"]),
     "invalid_json": (
         "01", write("eeg.json", '{"TaskName": "x",\n}'), ["eeg.json, line 2", "not valid JSON"]),
     "json_that_is_a_list": (
@@ -601,9 +622,25 @@ BAD_RECORDINGS = {
     "a_position_that_is_no_number": (
         "01", electrodes("name\tx\ty\tz\nOz\tback\t1\t2\n"), ["electrodes.tsv, line 2", "'back'"]),
     "electrodes_without_a_coordinate": (
-        "01", electrodes("name\tx\ty\nOz\t0\t1\n"), ["electrodes.tsv", "no column z", "add it"]),
+        "01", electrodes("name\tx\ty\nOz\t0\t1\n"), ["electrodes.tsv", "no column z", "Add it"]),
     "invalid_coordsystem": (
         "01", electrodes("name\tx\ty\tz\nOz\t0\t1\t2\n", "{"), ["coordsystem.json, line 1"]),
+    "coordinates_without_units": (
+        "01", electrodes("name\tx\ty\tz\nOz\t0\t1\t2\n", '{"EEGCoordinateSystem": "CapTrak"}'),
+        ["coordsystem.json has no EEGCoordinateUnits", "add it"]),
+    "coordinates_in_unknown_units": (
+        "01", electrodes("name\tx\ty\tz\nOz\t0\t1\t2\n",
+                         '{"EEGCoordinateSystem": "CapTrak", "EEGCoordinateUnits": "inch"}'),
+        ["EEGCoordinateUnits is 'inch'", "expected one of m, cm, mm", "correct it"]),
+    "participants_without_labels": (
+        "01", lambda s: (s.root / "participants.tsv").write_text("age\n30\n"),
+        ["participants.tsv has no column participant_id", "it has age", "Add it"]),
+    "empty_participants": (
+        "01", lambda s: (s.root / "participants.tsv").write_text(""),
+        ["participants.tsv has no rows", "take the file away"]),
+    "scans_without_names": (
+        "01", lambda s: (s.root / "sub-01/sub-01_scans.tsv").write_text("acq_time\nn/a\n"),
+        ["sub-01_scans.tsv has no column filename", "Add it"]),
     "participants_with_a_ragged_row": (
         "01", lambda s: (s.root / "participants.tsv").write_text("participant_id\tage\nsub-01\n"),
         ["participants.tsv, line 2", "1 cells", "expected 2"]),
@@ -707,6 +744,15 @@ ODD_BUT_SOUND = {
     "events_of_no_condition_anywhere": (
         "01", change("events.tsv", ("2\t8\tleft", "2\t8\tleft\n3\t1\tblink\n-5\t0\tstart"))),
     "an_end_within_one_sample": ("01", change("events.tsv", ("22\t6", "24.004\t6"))),
+    "a_date_of_centuries_ago": (  # as BIDS has dates shifted
+        "01", lambda s: (s.root / "sub-01/sub-01_scans.tsv").write_text(
+            "filename\tacq_time\neeg/sub-01_task-x_eeg.vhdr\t1800-01-01T00:00:00\n")),
+    "a_date_that_is_none": (
+        "01", lambda s: (s.root / "sub-01/sub-01_scans.tsv").write_text(
+            "filename\tacq_time\neeg/sub-01_task-x_eeg.vhdr\tyesterday\n")),
+    "edf_date_that_is_none": ("02", of("02", patch("eeg.edf", 168, "99.99.99"))),
+    "an_unrelated_event_without_onset": (
+        "01", change("events.tsv", ("2\t8\tleft", "2\t8\tleft\nn/a\t1\tblink"))),
     "columns_in_another_order": (
         "01", events("left\t8\t2", "right\t8\t12", "rest\t6\t22",
                      header="trial_type\tduration\tonset")),
@@ -744,6 +790,45 @@ def test_a_recording_that_is_understood(study, capfd, case):
     assert all(row["status"] == "good" for row in rows)
 
 
+def write_eeglab(study):
+    """Turn the BrainVision recording into EEGLAB's MATLAB file and the samples beside it."""
+    for suffix in ("eeg.vhdr", "eeg.vmrk", "eeg.eeg"):
+        study.at(suffix).unlink()
+    samples_uv = digits() * UV_PER_DIGIT
+    about = {
+        "setname": "x", "nbchan": len(CHANNELS), "trials": 1, "pnts": samples_uv.shape[1],
+        "srate": RATE_HZ, "xmin": 0.0, "xmax": DURATION_S, "data": study.at("eeg.fdt").name,
+        "chanlocs": np.array([(name,) for name in CHANNELS], dtype=[("labels", object)]),
+        "event": [], "epoch": [], "icawinv": [], "icaweights": [], "icasphere": [],
+    }  # fmt: skip
+    study.at("eeg.fdt").write_bytes(samples_uv.T.astype("<f4").tobytes())
+    savemat(study.at("eeg.set"), {"EEG": about}, appendmat=False)
+
+
+def test_eeglab_is_understood(study):
+    write_eeglab(study)
+    taken_in = intake(study)
+    assert len(tables.read_table(taken_in.output.trials)) == 3
+    signal_uv = dataset.eeg_uv(dataset.read_signal(taken_in.output.signal))
+    # single precision, in which it is written: 24 bits, of at most 257 µV
+    np.testing.assert_allclose(signal_uv, digits()[:-1] * UV_PER_DIGIT, atol=1e-4)
+
+
+@pytest.mark.parametrize(
+    ("damage", "words"),
+    [
+        pytest.param(cut("eeg.fdt", 0.5), ["eeg.fdt", "eeg.set says 30 s"], id="truncated_samples"),
+        pytest.param(remove("eeg.fdt"), ["eeg.set cannot be read"], id="no_samples"),
+        pytest.param(cut("eeg.set", 0.5), ["eeg.set cannot be read"], id="truncated_header"),
+        pytest.param(write("eeg.set", ""), ["eeg.set is empty"], id="zero_length"),
+        pytest.param(write("eeg.set", "text"), ["eeg.set cannot be read"], id="another_file"),
+    ],
+)
+def test_eeglab_that_cannot_be_used(study, capfd, damage, words):
+    both(write_eeglab, damage)(study)
+    assert_refused(study, capfd, lambda: intake(study), *words, "anew")
+
+
 def log_of(job):
     return Path(job.log[0]).read_text()
 
@@ -764,6 +849,14 @@ def test_an_inherited_line_frequency_reaches_the_signal(study):
         pytest.param(remove("channels.tsv"), "no channels.tsv: types are", id="no_channels"),
         pytest.param(tell(PowerLineFrequency="n/a"), "no mains hum is taken out", id="no_hum"),
         pytest.param(tell(RecordingDuration=10), "has 30 s, RecordingDuration is 10", id="longer"),
+        pytest.param(
+            electrodes(
+                "name\tx\ty\tz\nOz\t0\t1\t2\n",
+                '{"EEGCoordinateSystem": "Elsewhere", "EEGCoordinateUnits": "m"}',
+            ),
+            "no position of electrodes.tsv could be used",
+            id="unknown_coordinates",
+        ),
     ],
 )
 def test_what_is_taken_for_granted_is_told_in_the_log(study, damage, words):

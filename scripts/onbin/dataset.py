@@ -71,11 +71,12 @@ def read_recording(
             warnings.simplefilter("ignore")
             raw = mne_bids.read_raw_bids(path, on_ch_mismatch="warn", verbose="error")
     except Exception as error:  # readers raise whatever a damaged file leads them to
-        first_line = next(iter(str(error).splitlines()), "") or type(error).__name__
+        log.error("the reader says: %s: %s", type(error).__name__, error)
         raise DataError(
-            f"{path.fpath} cannot be read ({first_line}). Check that the file is complete, or "
-            "leave the recording out."
+            f"{path.fpath} cannot be read, though its length is what its header says; the log "
+            "tells what the reader says. Export the recording anew, or leave it out."
         ) from error
+    raw.set_meas_date(None)  # none is kept, and dates are often shifted to what mne cannot write
     kinds = {name: channel.kind for name, channel in channels.items()}
     raw.set_channel_types(kinds, on_unit_change="ignore", verbose="error")
     raw.info["bads"] = [name for name, channel in channels.items() if channel.bad]
@@ -93,7 +94,8 @@ def check_events(events: str | Path | None) -> None:
     """
     for number, row in read_numbered(events) if events else []:
         for column in ("onset", "duration"):
-            _seconds(events, number, column, row)
+            if row.get(column) != MISSING:
+                _seconds(events, number, column, row)
 
 
 def choose_channels(raw, photodiode: str | None = None) -> list[dict[str, Any]]:
@@ -310,7 +312,7 @@ def _same(found: str | None, wanted: str | int | float) -> bool:
 def _seconds(events: str | Path | None, number: int, column: str, row: Mapping[str, str]) -> float:
     text = row.get(column)
     if text is None:
-        raise DataError(f"{events} has no column {column}; BIDS requires it.")
+        raise DataError(f"{events} has no column {column}, which BIDS requires; add it.")
     if text == MISSING and column == "duration":
         return 0.0
     try:
@@ -319,7 +321,8 @@ def _seconds(events: str | Path | None, number: int, column: str, row: Mapping[s
         value = math.nan
     if not math.isfinite(value) or (column == "duration" and value < 0):
         raise DataError(
-            f"{events}, line {number}: {column} is {text!r}, expected a number of seconds."
+            f"{events}, line {number}: {column} is {text!r}, expected a number of seconds; correct "
+            "it."
         )
     return value
 
@@ -481,8 +484,8 @@ def check_scale(data_uv: np.ndarray, raw) -> None:
     if not low <= spread <= high:
         raise DataError(
             f"the median channel varies by {spread:.3g} µV (standard deviation), expected {low} to "
-            f"{high:g}. Check units in channels.tsv: volts may be given as microvolts, or the "
-            "reverse."
+            f"{high:g}. Check the unit in the data file: volts may be given as microvolts, or the "
+            "reverse; and whether anything was recorded."
         )
 
 

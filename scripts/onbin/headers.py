@@ -111,7 +111,11 @@ def _brainvision(path: Path) -> Header:
             raise DataError(f"{path} has no {key}, which a BrainVision header must have. {AGAIN}")
     n_channels = _number(path, "NumberOfChannels", common["NumberOfChannels"], whole=True)
     interval_us = _number(path, "SamplingInterval", common["SamplingInterval"])
-    names = [value.split(",")[0].replace("\\1", ",") for value in listed.values()]
+    names = []
+    for value in listed.values():
+        name, _, resolution, *_ = [*value.split(","), "", ""]  # name, reference, resolution, unit
+        _number(path, f"the resolution of {name}", resolution or "1", least=-math.inf)
+        names.append(name.replace("\\1", ","))
     if len(names) != n_channels:
         raise DataError(
             f"{path}: NumberOfChannels is {n_channels:g}, but {len(names)} channels are listed "
@@ -159,8 +163,8 @@ def _edf(path: Path) -> Header:
         expected = b"\xffBIOSEMI" if path.suffix == ".bdf" else b"0       "
         if not first.startswith(expected):
             raise DataError(
-                f"{path} begins with {first[:8]!r}, expected {expected!r}: it is no "
-                f"{path.suffix[1:].upper()} file. {AGAIN}"
+                f"{path} does not begin as a file of {path.suffix[1:].upper()} does: found "
+                f"{first[:8].decode('latin-1')!r}, expected {expected.decode('latin-1')!r}. {AGAIN}"
             )
         text = first.decode("latin-1")
         n_signals = int(_number(path, "the number of signals", text[252:256], whole=True))
@@ -169,8 +173,8 @@ def _edf(path: Path) -> Header:
         n_records = _number(path, "the number of data records", text[236:244], whole=True, least=-1)
         if header_bytes != 256 * (n_signals + 1) or size < header_bytes:
             raise DataError(
-                f"{path}: {n_signals} signals make a header of {256 * (n_signals + 1)} bytes, but "
-                f"it says {header_bytes:g}, and the file has {size}. {AGAIN}"
+                f"{path}: {n_signals} signals make a header of {256 * (n_signals + 1)} bytes; the "
+                f"header says {header_bytes:g}, and the whole file has {size}. {AGAIN}"
             )
         signals = file.read(256 * n_signals).decode("latin-1")
     if text[192:197] in ("EDF+D", "BDF+D"):
@@ -179,6 +183,16 @@ def _edf(path: Path) -> Header:
             "samples. Export it as one continuous recording, or leave it out."
         )
     names = [signals[16 * i : 16 * (i + 1)].strip() for i in range(n_signals)]
+    for first, second in ((104, 112), (120, 128)):  # physical and digital minimum and maximum
+        for i, name in enumerate(names):
+            low, high = (
+                _number(path, f"a limit of {name}", text, least=-math.inf, zero=True)
+                for text in (signals[n_signals * at + 8 * i :][:8] for at in (first, second))
+            )
+            if low == high:
+                raise DataError(
+                    f"{path}: the lower and the upper limit of {name} are both {low:g}. {AGAIN}"
+                )
     counts = [
         int(_number(path, f"samples a record of {name}", signals[start : start + 8], whole=True))
         for name, start in zip(names, range(216 * n_signals, 224 * n_signals, 8), strict=True)
@@ -188,14 +202,15 @@ def _edf(path: Path) -> Header:
         raise DataError(f"{path} has no signal but annotations. {AGAIN}")
     _require_binary(path, int(header_bytes))
     record_bytes = sum(counts) * sample_bytes
-    there, over = divmod(size - int(header_bytes), record_bytes)
+    data_bytes = size - int(header_bytes)
+    there, over = divmod(data_bytes, record_bytes)
     if n_records == -1:
         log.warning("%s does not say how many data records it has; it was not closed", path)
     elif (there, over) != (n_records, 0):
         raise DataError(
-            f"{path}: the header says {n_records:g} data records, {n_records * record_s:g} s; the "
-            f"file has {(there + over / record_bytes):.4g}, {there * record_s:g} s: it was cut or "
-            f"changed. {AGAIN}"
+            f"{path}: the header says {n_records:g} data records, {n_records * record_s:g} s in "
+            f"{n_records * record_bytes:.0f} bytes; the file has {there}, {there * record_s:g} s, "
+            f"in {data_bytes} bytes: it was cut or changed. {AGAIN}"
         )
     per_record = max(counts[i] for i in channels)
     return Header(
@@ -218,8 +233,11 @@ def _eeglab(path: Path) -> Header:
             warnings.simplefilter("ignore")
             raw = mne.io.read_raw_eeglab(path, verbose="error")
     except Exception as error:  # whatever a damaged file leads the reader to
-        first_line = next(iter(str(error).splitlines()), "") or type(error).__name__
-        raise DataError(f"{path} cannot be read ({first_line}). {AGAIN}") from error
+        log.error("the reader says: %s: %s", type(error).__name__, error)
+        raise DataError(
+            f"{path} cannot be read, or the .fdt beside it; the log tells what the reader says. "
+            f"{AGAIN}"
+        ) from error
     data = Path(raw.filenames[0])
     expected = 4 * len(raw.ch_names) * raw.n_times  # .fdt holds single precision
     if data.suffix == ".fdt" and data.stat().st_size != expected:
@@ -230,16 +248,19 @@ def _eeglab(path: Path) -> Header:
     return Header(path, tuple(raw.ch_names), raw.info["sfreq"], raw.n_times)
 
 
-def _number(path: Path, what: str, text: str, whole: bool = False, least: float = 0.0) -> float:
-    """Number of a header; above 0, or at least ``least`` if that is negative."""
+def _number(
+    path: Path, what: str, text: str, whole: bool = False, least: float = 0.0, zero: bool = False
+) -> float:
+    """Number of a header; above 0, or below it down to ``least``, and 0 itself if ``zero``."""
     try:
         value = float(text)
     except ValueError:
         value = math.nan
-    usable = math.isfinite(value) and (value > 0 or least <= value < 0)
+    usable = math.isfinite(value) and (value > 0 or least <= value < 0 or (zero and value == 0))
     if not usable or (whole and value != int(value)):
-        kind = "whole number" if whole else "number"
-        raise DataError(f"{path}: {what} is {text.strip()!r}, expected a {kind} above 0. {AGAIN}")
+        kind = "a whole number" if whole else "a number"
+        limit = " above 0" if least == 0 else "" if zero else " other than 0"
+        raise DataError(f"{path}: {what} is {text.strip()!r}, expected {kind}{limit}. {AGAIN}")
     return value
 
 

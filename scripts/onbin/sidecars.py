@@ -3,7 +3,7 @@
 import json
 import logging
 import math
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -11,7 +11,7 @@ from typing import Any
 from onbin import layout
 from onbin.errors import DataError
 from onbin.headers import Header
-from onbin.tables import MISSING, read_foreign, read_numbered
+from onbin.tables import MISSING, read_numbered
 
 log = logging.getLogger("onbin")
 
@@ -27,6 +27,7 @@ OTHER_TYPES = (
     "ORNT", "OTHER", "POS", "PPG", "PUPIL", "REF", "RESP", "SEEG", "SYSCLOCK", "TEMP", "TRIG",
     "VEL",
 )  # fmt: skip
+UNITS = ("m", "cm", "mm", MISSING)  # of EEGCoordinateUnits
 STATUSES = ("good", "bad", MISSING, "")
 TRIGGERS = "Status"  # BDF's own channel of triggers, which lists of channels often leave out
 DURATION_TOLERANCE_S = 1.0  # durations in sidecars are often rounded to seconds
@@ -139,6 +140,11 @@ def check_eeg_json(told: Mapping[str, Any], header: Header, line_hz: float | Non
             f"SamplingFrequency in eeg.json is {rate_hz:g}. Correct whichever is wrong."
         )
     told_line_hz = _positive(told, "PowerLineFrequency", header)
+    if told.get("RecordingType") == "epoched":
+        raise DataError(
+            f"{header.path}: RecordingType in its eeg.json is epoched, expected continuous; take "
+            "the continuous recording, or leave it out."
+        )
     if line_hz is None and told_line_hz is None:
         if "PowerLineFrequency" not in told:
             raise DataError(
@@ -202,12 +208,7 @@ def read_channels(files: Iterable[str], header: Header) -> dict[str, Channel]:
         log.warning("no channels.tsv: types are those of the data file, and no channel is bad")
         return {}
     rows = read_numbered(path)
-    for column in ("name", "type"):
-        if rows and column not in rows[0][1]:
-            raise DataError(
-                f"{path} has no column {column}, which BIDS requires; it has "
-                f"{', '.join(rows[0][1])}. Add it."
-            )
+    _require_columns(path, rows, ("name", "type"))
     lines: dict[str, int] = {}
     channels: dict[str, Channel] = {}
     for number, row in rows:
@@ -220,11 +221,12 @@ def read_channels(files: Iterable[str], header: Header) -> dict[str, Channel]:
         if kind not in KEPT_TYPES and kind not in OTHER_TYPES:
             raise DataError(
                 f"{path}, line {number}: type is {row['type']!r}, expected one of BIDS, such as "
-                f"{', '.join(KEPT_TYPES)}, TRIG or MISC."
+                f"{', '.join(KEPT_TYPES)}, TRIG or MISC; correct it."
             )
         if status not in STATUSES:
             raise DataError(
-                f"{path}, line {number}: status is {row['status']!r}, expected good, bad or n/a."
+                f"{path}, line {number}: status is {row['status']!r}, expected good, bad or n/a; "
+                "correct it."
             )
         lines[name] = number
         channels[name] = Channel(KEPT_TYPES.get(kind, "misc"), status == "bad")
@@ -239,6 +241,17 @@ def read_channels(files: Iterable[str], header: Header) -> dict[str, Channel]:
     return channels
 
 
+def _require_columns(
+    path: str | Path, rows: Sequence[tuple[int, dict[str, str]]], columns: Iterable[str]
+) -> None:
+    for column in columns:
+        if rows and column not in rows[0][1]:
+            raise DataError(
+                f"{path} has no column {column}, which BIDS requires; it has "
+                f"{', '.join(rows[0][1])}. Add it."
+            )
+
+
 def check_positions(files: Iterable[str]) -> None:
     """See that electrodes.tsv and coordsystem.json can be read by those who place electrodes.
 
@@ -249,17 +262,25 @@ def check_positions(files: Iterable[str]) -> None:
     files = list(files)
     systems = nearest(files, "coordsystem.json")
     for path in systems:
-        read_json(path)
+        told = read_json(path)
+        for key in ("EEGCoordinateSystem", "EEGCoordinateUnits"):
+            if key not in told:
+                raise DataError(f"{path} has no {key}, which BIDS requires; add it.")
+        if told["EEGCoordinateUnits"] not in UNITS:
+            raise DataError(
+                f"{path}: EEGCoordinateUnits is {told['EEGCoordinateUnits']!r}, expected one of "
+                f"{', '.join(UNITS)}; correct it."
+            )
     for path in nearest(files, "electrodes.tsv"):
         if not systems:
             raise DataError(
                 f"{path}: no coordsystem.json says what its coordinates mean; BIDS requires it. "
                 "Add it, or take electrodes.tsv away to use the template's positions."
             )
-        for number, row in read_numbered(path):
+        rows = read_numbered(path)
+        _require_columns(path, rows, ("name", "x", "y", "z"))
+        for number, row in rows:
             for column in ("name", "x", "y", "z"):
-                if column not in row:
-                    raise DataError(f"{path} has no column {column}, which BIDS requires; add it.")
                 if column != "name" and row[column] != MISSING and not _is_number(row[column]):
                     raise DataError(
                         f"{path}, line {number}: {column} is {row[column]!r}, expected a number "
@@ -284,6 +305,12 @@ def check_people(folder: str | Path, recording: str) -> None:
     labels = layout.entities(recording)
     own = Path(folder, f"sub-{labels['sub']}", f"ses-{labels['ses']}" if "ses" in labels else "")
     stem = "_".join(f"{key}-{labels[key]}" for key in ("sub", "ses") if key in labels)
-    for path in (Path(folder) / "participants.tsv", own / f"{stem}_scans.tsv"):
+    for path, key in (
+        (Path(folder) / "participants.tsv", "participant_id"),
+        (own / f"{stem}_scans.tsv", "filename"),
+    ):
         if path.is_file():
-            read_foreign(path)
+            rows = read_numbered(path)
+            if not rows:
+                raise DataError(f"{path} has no rows; add them, or take the file away.")
+            _require_columns(path, rows, [key])

@@ -78,7 +78,7 @@ def read_numbered(path: str | Path) -> list[tuple[int, dict[str, str]]]:
         if len(cells) != len(header):
             raise DataError(
                 f"{path}, line {number}: found {len(cells)} cells, expected {len(header)} as in "
-                f"the header; cells are parted by tabs."
+                f"the header; cells are parted by tabs. Correct the line."
             )
     return [(number, dict(zip(header, cells, strict=True))) for number, cells in others]
 
