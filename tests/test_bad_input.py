@@ -507,7 +507,7 @@ BAD_RECORDINGS = {
         "01", change("eeg.vhdr", (f"Ch1=Fp1,,{UV_PER_DIGIT}", "Ch1=Fp1,,0")),
         ["resolution of Fp1 is '0'", "other than 0", "anew"]),
     "brainvision_marker_that_is_none": (
-        "01", change("eeg.vmrk", ("Infos]\n", "Infos]\nMk1=Stimulus,S1,soon,1,0\n")),
+        "01", change("eeg.vmrk", ("[Marker Infos]", "[Marker Infos]\nMk1=Stimulus,S1,soon,1")),
         ["eeg.vhdr cannot be read", "the log tells", "Export"]),
     "data_file_is_a_folder": (
         "02", lambda s: (of("02", remove("eeg.edf"))(s), of("02", lambda t: t.data.mkdir())(s)),
