@@ -144,7 +144,7 @@ def _brainvision(path: Path) -> Header:
         )
     frame = int(n_channels) * SAMPLE_BYTES[kind]
     size = data.stat().st_size
-    _require_binary(data)
+    require_binary(data)
     if size % frame:
         raise DataError(
             f"{data}: {size} bytes are no whole number of samples of {n_channels:g} channels "
@@ -200,7 +200,7 @@ def _edf(path: Path) -> Header:
     channels = [i for i, name in enumerate(names) if name not in ANNOTATIONS]
     if not channels:
         raise DataError(f"{path} has no signal but annotations. {AGAIN}")
-    _require_binary(path, int(header_bytes))
+    require_binary(path, int(header_bytes))
     record_bytes = sum(counts) * sample_bytes
     data_bytes = size - int(header_bytes)
     there, over = divmod(data_bytes, record_bytes)
@@ -264,8 +264,14 @@ def _number(
     return value
 
 
-def _require_binary(path: Path, start: int = 0) -> None:
-    """A file that was sent as text has a carriage return before every line feed."""
+def require_binary(path: Path, start: int = 0) -> None:
+    """See that a file was not sent as text, with a carriage return put before every line feed.
+
+    Raises
+    ------
+    DataError
+        If each of many has one.
+    """
     feeds, pairs, before = 0, 0, b""
     with open(path, "rb") as file:
         file.seek(start, os.SEEK_SET)
