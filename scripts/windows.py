@@ -19,11 +19,11 @@ COMPONENTS = [
 VERDICTS = [
     "window", "trial", "condition", "index_in_trial", "start_sample", "n_samples", "offset_s",
     "verdict", "reason", "peak_to_peak_uv", "peak_to_peak_limit_uv", "gradient_uv_per_ms",
-    "gradient_limit_uv_per_ms", "muscle_uv", "muscle_limit_uv", "flat_uv",
+    "gradient_limit_uv_per_ms", "muscle_uv", "muscle_limit_uv", "flat_uv", "noise_beside",
 ]  # fmt: skip
 GAINS = [
     "tag", "term", "frequency_hz", "site", "filter_gain", "gain", "peak_gain",
-    "topography_correlation",
+    "topography_correlation", "t2circ_p",
 ]  # fmt: skip
 
 
@@ -32,22 +32,15 @@ def clean_and_cut(inputs, outputs, settings):
     raw = dataset.open_signal(inputs.signal)
     rate = tagging.exact_rate(raw.info["sfreq"])
     evidence = components.Evidence.of(arrays.read(inputs.ica))
-    separated = evidence.separation
-    judged = evidence.judge(
-        components.ComponentLimits(
-            settings["components"]["remove"], settings["components"]["max_tag_share"]
-        ),
-        decisions.by_item(
-            settings["decisions"],
-            separated.items,
-            settings["decisions_file"],
-            settings["recording"],
-        ),
+    decided = decisions.by_item(
+        settings["decisions"],
+        evidence.separation.items,
+        settings["decisions_file"],
+        settings["recording"],
     )
-    removed = {v.component: v.label for v in judged if v.verdict == components.REMOVED}
-    before_uv = dataset.eeg_uv(raw)
-    clean_uv, gates = components.remove_components(before_uv, separated, removed, float(rate))
-
+    filter_gains = {
+        (row["tag"], row["term"]): row["gain"] for row in tables.read_table(inputs.gains)
+    }
     flickering = {name: about["flickering"] for name, about in settings["conditions"].items()}
     chosen = settings["windows"]
     passband_hz = tagging.passband_end(
@@ -67,39 +60,76 @@ def clean_and_cut(inputs, outputs, settings):
         ),
         chosen["skip_s"],
     )
-    verdicts = windows.judge_windows(
-        clean_uv,
-        placed,
-        float(rate),
-        windows.WindowLimits(peak_to_peak_uv=tuple(chosen["peak_to_peak_uv"])),
-        dataset.bad_spans(raw),
-        [float(term.frequency) for term in terms],
+    names = dataset.eeg_names(raw)
+    region = [names.index(name) for name in response_channels(settings) if name in names]
+    bins = tagging.neighbour_offsets(
+        settings["response"]["neighbours"], settings["response"]["skip"]
     )
-    survival = windows_tables.survival_rows(
-        before_uv,
-        dataset.eeg_names(raw),
-        lambda open_share: separated.removal(removed, open_share),
-        {(row["tag"], row["term"]): row["gain"] for row in tables.read_table(inputs.gains)},
-        gates,
-        [v.window for v in verdicts if v.verdict == windows.KEPT],
-        terms,
-        samples,
-        float(rate),
-        flickering,
+
+    def attempt(before_uv, judged):
+        """Take out the components that go, judge the windows, see what is left of the response."""
+        removed = {v.component: v.label for v in judged if v.verdict == components.REMOVED}
+        clean_uv, gates = components.remove_components(
+            before_uv, evidence.separation, removed, float(rate)
+        )
+        verdicts = windows.judge_windows(
+            clean_uv,
+            placed,
+            float(rate),
+            windows.WindowLimits(peak_to_peak_uv=tuple(chosen["peak_to_peak_uv"])),
+            dataset.bad_spans(raw),
+            [float(term.frequency) for term in terms],
+            windows_tables.noise_beside(
+                clean_uv[region].mean(axis=0),
+                placed,
+                terms,
+                samples,
+                bins,
+                float(rate),
+                flickering,
+            ),
+        )
+        survival = windows_tables.survival_rows(
+            before_uv,
+            names,
+            lambda open_share: evidence.separation.removal(removed, open_share),
+            filter_gains,
+            gates,
+            [v.window for v in verdicts if v.verdict == windows.KEPT],
+            terms,
+            samples,
+            float(rate),
+            flickering,
+        )
+        return clean_uv, verdicts, list(survival)
+
+    judged = evidence.judge(
+        components.ComponentLimits(
+            settings["components"]["remove"], settings["components"]["max_tag_share"]
+        ),
+        decided,
     )
+    before_uv = dataset.eeg_uv(raw)
+    clean_uv, verdicts, survival = attempt(before_uv, judged)
+    while spared := evidence.spare(judged, windows_tables.harmed_tags(survival), decided):
+        judged = spared
+        clean_uv, verdicts, survival = attempt(before_uv, judged)
 
     del before_uv
     raw.load_data(verbose="error")
     dataset.put_eeg(raw, clean_uv)
     dataset.write_signal(raw, outputs.signal)
-    tables.write_table(
-        outputs.components,
-        [v.row(peak) for v, peak in zip(judged, separated.peak_channels, strict=True)],
-        COMPONENTS,
-    )
+    peaks = evidence.separation.peak_channels
+    rows = [v.row(peak) for v, peak in zip(judged, peaks, strict=True)]
+    tables.write_table(outputs.components, rows, COMPONENTS)
     rows = windows_tables.verdict_rows(verdicts, unplaced, trials)
     tables.write_table(outputs.verdicts, rows, VERDICTS)
     tables.write_table(outputs.gains, survival, GAINS)
+
+
+def response_channels(settings):
+    """Channels of the region of the response."""
+    return settings["regions"][settings["relation"]["response_region"]]
 
 
 if "snakemake" in globals():

@@ -105,7 +105,6 @@ def cleaned(folder, chosen):
     windows_step.clean_and_cut(
         SimpleNamespace(
             signal=of_sensors["signal"],
-            sensors=of_sensors["verdicts"],
             ica=of_components["ica"],
             gains=of_filter["gains"],
             trials=recorded["trials"],

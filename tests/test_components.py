@@ -4,9 +4,11 @@ import json
 import mne
 import numpy as np
 import pytest
+from onbin import arrays
 from onbin.components import (
     CLASSES,
     ComponentLimits,
+    Evidence,
     Separation,
     activity,
     artifact_correlations,
@@ -292,3 +294,63 @@ def test_correlation_removes_where_its_class_is_removed():
     assert judged.reason == "correlates 0.80 with a channel of the eye"
     (judged,) = judge_components(*arguments, ComponentLimits({"muscle": 0.8}, 0.1), correlations)
     assert judged.verdict == "kept"
+
+
+# ------------------------------------------------------------------------- decisions, and sparing
+
+
+def evidence_of(tag_share, eye=0.95):
+    n = len(tag_share)
+    return Evidence(
+        separation=Separation(np.eye(n), np.eye(n), np.array([f"E{i}" for i in range(n)])),
+        probabilities=np.tile(probabilities_of(eye=eye), (n, 1)),
+        eye_correlation=np.full(n, np.nan),
+        heart_correlation=np.full(n, np.nan),
+        variance_share=np.full(n, 1 / n),
+        tag=np.array(["left", "right"]),
+        tag_share=np.array(tag_share),
+    )
+
+
+def told(verdict):
+    return {"verdict": verdict, "told": "looked at (decided by RK)", "item": "x"}
+
+
+def test_a_person_decides_over_the_tool():
+    evidence = evidence_of([[0.0, 0.0], [0.5, 0.0], [0.0, 0.0]])
+    first, second, third = evidence.judge(LIMITS, {})
+    assert (first.verdict, second.verdict, second.flagged) == ("removed", "kept", True)
+    decided = {"0 E0": told("keep"), "1 E1": told("remove")}
+    first, second, third = evidence.judge(LIMITS, decided)
+    assert (first.verdict, second.verdict, second.flagged) == ("kept", "removed", False)
+    assert first.reason.startswith("looked at (decided by RK)")
+    assert third.verdict == "removed"
+    assert third.reason == "eye with probability 0.95"
+
+
+def test_what_takes_most_of_a_harmed_tag_is_spared_unless_a_person_removes_it():
+    evidence = evidence_of([[0.04, 0.00], [0.01, 0.08], [0.05, 0.02]])
+    judged = evidence.judge(LIMITS, {})
+    assert evidence.spare(judged, [], {}) is None
+    spared = evidence.spare(judged, ["left"], {})
+    assert [v.verdict for v in spared] == ["removed", "removed", "kept"]
+    assert spared[2].flagged
+    assert "takes part of the response at left" in spared[2].reason
+    assert [v.verdict for v in evidence.spare(judged, ["left+right"], {})][1] == "kept"
+    decided = {"2 E2": told("remove")}
+    spared = evidence.spare(evidence.judge(LIMITS, decided), ["left"], decided)
+    assert [v.verdict for v in spared] == ["kept", "removed", "removed"]
+    everything = {f"{i} E{i}": told("remove") for i in range(3)}
+    assert evidence.spare(evidence.judge(LIMITS, everything), ["left"], everything) is None
+
+
+def test_evidence_survives_its_file(tmp_path):
+    evidence = evidence_of([[0.04, 0.00], [0.01, 0.08]])
+    arrays.write(tmp_path / "ica.npz", **evidence.arrays())
+    back = Evidence.of(arrays.read(tmp_path / "ica.npz"))
+    assert str(back.rows()) == str(evidence.rows())
+    assert back.separation.items == ["0 E0", "1 E1"]
+    row = back.rows()[0]
+    assert (row["peak_channel"], row["component_class"], row["eye_p"]) == ("E0", "eye", 0.95)
+    assert row["tag_shares"] == "left 0.040; right 0.000"
+    assert Evidence.none(["Oz"]).rows() == []

@@ -98,7 +98,8 @@ def test_each_planted_artifact_has_its_reason(quiet):
     data_uv[2, 3000:3500] = 0.1
     rng = np.random.default_rng(1)
     data_uv[3, 4000:4500] += 20 * rng.standard_normal(500)
-    verdicts = judge_windows(data_uv, windows, SAMPLING_HZ, WindowLimits(gradient_uv_per_ms=(8, 8)))
+    limits = WindowLimits(peak_to_peak_uv=(150, 150), gradient_uv_per_ms=(8, 8), muscle_uv=(10, 10))
+    verdicts = judge_windows(data_uv, windows, SAMPLING_HZ, limits)
     told = left_out(verdicts)
     assert told[2] == ("peak to peak",)
     assert "gradient" in told[4]
@@ -158,6 +159,15 @@ def test_annotated_stretches_leave_their_windows_out(quiet):
         3: ("annotated BAD_move",),
         4: ("annotated BAD_move",),
     }
+
+
+def test_noise_beside_the_tags_leaves_a_window_out(quiet):
+    data_uv, windows = quiet
+    noise = np.ones(len(windows))
+    noise[[2, 5, 6]] = 7.9, 8.1, np.nan  # nothing flickers in the last
+    verdicts = judge_windows(data_uv, windows, SAMPLING_HZ, WindowLimits(), noise_beside=noise)
+    assert left_out(verdicts) == {5: ("noise beside the tags",)}
+    assert verdicts[5].figures["noise_beside"] == 8.1
 
 
 def test_not_a_number_is_never_kept(quiet):

@@ -7,7 +7,13 @@ import pytest
 from onbin import tagging
 from onbin.columns import COLUMNS
 from onbin.windows import KEPT, LEFT_OUT, Unplaced, Window, WindowVerdict
-from onbin.windows_tables import samples_by_condition, survival_rows, verdict_rows
+from onbin.windows_tables import (
+    harmed_tags,
+    noise_beside,
+    samples_by_condition,
+    survival_rows,
+    verdict_rows,
+)
 
 FLICKERING = {"view": ["left"], "both": ["left", "right"], "rest": []}
 TRIALS = [{"trial": 1}, {"trial": 2}, {"trial": 3}]
@@ -156,3 +162,38 @@ def test_removal_is_asked_for_the_share_of_time_in_the_windows(recorded):
 def test_without_kept_windows_there_is_nothing_to_tell(recorded):
     assert survivals(recorded, lambda share: np.eye(3), conditions=()) == {}
     assert survivals(recorded, lambda share: np.eye(3), conditions=("rest",)) == {}
+
+
+def test_noise_beside_the_tags_is_held_against_the_median_window():
+    """An artifact at the neighbouring bins counts, one at the tag or far from it does not."""
+    rng = np.random.default_rng(3)
+    signal_uv = rng.normal(size=10 * 500)
+    time_s = np.arange(500) / RATE_HZ
+    signal_uv[1000:1500] += 3 * np.cos(2 * np.pi * 11 * time_s)  # two bins below 12 Hz
+    signal_uv[2000:2500] += 30 * np.cos(2 * np.pi * 12 * time_s)
+    signal_uv[3000:3500] += 30 * np.cos(2 * np.pi * 40 * time_s)
+    placed = [Window(i, "view" if i < 8 else "rest", 0, 500 * i, 500, 0.0) for i in range(10)]
+    (left,) = terms_at(left=12)
+    ratios = noise_beside(
+        signal_uv, placed, [left], {left: 500}, [-4, -3, -2, 2, 3, 4], RATE_HZ, FLICKERING
+    )
+    assert np.isnan(ratios[8:]).all()
+    # white noise of 1 µV has E|X|² = 4/500 µV² in a bin of amplitude 2/N: 9 µV² in one of six bins
+    # is 1.5 µV², some 190 times that; of six bins the mean of others is within 0.2 to 3
+    assert 100 < ratios[2] < 400
+    assert (np.delete(ratios[:8], 2) < 3).all()
+
+
+def test_harmed_tags_are_those_with_a_response_that_is_changed():
+    def row(tag, peak_gain, p, filter_gain=1.0):
+        return {"tag": tag, "peak_gain": peak_gain, "filter_gain": filter_gain, "t2circ_p": p}
+
+    rows = [
+        row("a", 0.97, 1e-9),
+        row("b", 0.90, 1e-9),
+        row("c", 0.99, 1e-9),
+        row("d", 0.50, 0.01),  # noise
+        row("e", 0.50, None),  # one window
+        row("f", 0.97, 1e-9, filter_gain=0.98),  # the filters' doing
+    ]
+    assert harmed_tags(rows) == ["b", "a"]

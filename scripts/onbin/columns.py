@@ -130,11 +130,15 @@ COLUMNS = {
     ),
     # figures of windows
     "peak_to_peak_uv": Column("Largest peak-to-peak amplitude of any channel.", "µV"),
-    "peak_to_peak_limit_uv": Column("Its limit: median + 5 robust sd, within the bounds.", "µV"),
+    "peak_to_peak_limit_uv": Column("Its limit: median + 10 robust sd, within the bounds.", "µV"),
     "gradient_uv_per_ms": Column("Steepest step between samples of any channel.", "µV/ms"),
     "gradient_limit_uv_per_ms": Column("Its limit.", "µV/ms"),
     "muscle_uv": Column("Largest root mean square above 30 Hz of any channel.", "µV"),
     "muscle_limit_uv": Column("Its limit.", "µV"),
+    "noise_beside": Column(
+        "Noise beside the first two harmonics of the tags at the region of the response, over that "
+        "of the condition's median window; at most 8."
+    ),
     # decisions
     "item": _text("Channel; or number and peak channel of a component, such as 3 Fp1."),
     "by": _text("Who decided."),

@@ -2,7 +2,7 @@
 
 import warnings
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -144,7 +144,7 @@ def fit_components(raw, rank: int, method: str = "picard", seed: int = 0) -> Fit
     n_samples = slow_uv.shape[1]
 
     notes = []
-    eigenvalues = np.linalg.eigvalsh(np.cov(slow_uv))
+    eigenvalues = np.linalg.eigvalsh(_covariance(slow_uv))
     found_rank = int(np.sum(eigenvalues > SMALLEST_EIGENVALUE * eigenvalues[-1]))
     if found_rank < rank:
         notes.append(f"{found_rank} independent channels where {rank} were expected")
@@ -156,7 +156,8 @@ def fit_components(raw, rank: int, method: str = "picard", seed: int = 0) -> Fit
             f"{n_samples} samples for {rank} components, {n_samples / rank**2:.1f} a weight: "
             f"below {SAMPLES_PER_WEIGHT}, the components are uncertain"
         )
-    copy = mne.io.RawArray(slow_uv * 1e-6, _info_at(raw.info, picks, rate_hz), verbose="error")
+    slow_uv *= 1e-6  # to volts, in place: a copy would be a good part of the memory
+    copy = mne.io.RawArray(slow_uv, _info_at(raw.info, picks, rate_hz), verbose="error")
     ica = mne.preprocessing.ICA(
         n_components=rank,
         method=method,
@@ -342,6 +343,45 @@ class Evidence:
                 if item in decided
             },
         )
+
+    def spare(
+        self,
+        judged: Sequence[ComponentVerdict],
+        harmed_tags: Sequence[str],
+        decided: Mapping[str, Mapping[str, str]],
+    ) -> list[ComponentVerdict] | None:
+        """Keep and flag the component that takes most of a harmed tag with it.
+
+        Parameters
+        ----------
+        judged : sequence of ComponentVerdict
+        harmed_tags : sequence of str
+            Tags, or pairs joined by +, whose response the removal changes too much, worst first.
+        decided : mapping
+            A person's decisions: what a person removes is not spared.
+
+        Returns
+        -------
+        list of ComponentVerdict or None
+            None where nothing is harmed, or nothing can be spared.
+        """
+        items = self.separation.items
+        going = [
+            v.component
+            for v in judged
+            if v.verdict == REMOVED and items[v.component] not in decided
+        ]
+        if not harmed_tags or not going:
+            return None
+        columns = [list(self.tag).index(name) for name in harmed_tags[0].split("+")]
+        worst = max(going, key=lambda component: self.tag_share[component, columns].max())
+        told = f"takes part of the response at {harmed_tags[0]} with it: a person decides"
+        return [
+            replace(v, verdict=KEPT, flagged=True, reason=f"{v.reason}, but {told}")
+            if v.component == worst
+            else v
+            for v in judged
+        ]
 
 
 def words(row: Mapping[str, Any]) -> str:

@@ -247,7 +247,7 @@ class Windows(Part):
         0.5, description="Time left out after each onset: the transient response."
     )
     peak_to_peak_uv: Interval = Field(
-        [150.0, 400.0],
+        [300.0, 600.0],
         description="Bounds of the limit for a window's peak-to-peak amplitude, in µV; between "
         "them it is taken from the windows of the recording's condition.",
     )

@@ -1,5 +1,6 @@
 """Windows: where they lie, which are kept, and whether the cleaning let the response through."""
 
+import math
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
@@ -64,14 +65,20 @@ class WindowLimits:
         Bounds for the largest root mean square above `muscle_from_hz` of any channel.
     muscle_from_hz : float
         Where the muscle band begins.
+    noise_beside : float
+        Most noise beside the tags, over that of the median window of the condition.
     flat_uv : float
         A channel whose peak-to-peak amplitude is smaller is flat.
     """
 
-    mad_factor: float = 5.0
-    peak_to_peak_uv: tuple[float, float] = (150.0, 400.0)
-    gradient_uv_per_ms: tuple[float, float] = (10.0, 50.0)
-    muscle_uv: tuple[float, float] = (8.0, 30.0)
+    # A window that is left out takes a part of the average with it. That pays only where an
+    # artifact is larger at what is measured than the brain is: so the bounds are wide, and what
+    # lies beside the tags is judged by itself (measured in tests/test_cleaning_truth.py).
+    mad_factor: float = 10.0
+    peak_to_peak_uv: tuple[float, float] = (300.0, 600.0)
+    gradient_uv_per_ms: tuple[float, float] = (50.0, 100.0)
+    muscle_uv: tuple[float, float] = (30.0, 60.0)
+    noise_beside: float = 8.0
     muscle_from_hz: float = 30.0
     flat_uv: float = 0.5
 
@@ -177,8 +184,9 @@ def judge_windows(
     limits: WindowLimits,
     bad_spans: Iterable[tuple[float, float, str]] = (),
     terms_hz: Sequence[float] = (),
+    noise_beside: Sequence[float] | None = None,
 ) -> list[WindowVerdict]:
-    """Judge each window by amplitude, gradient, flatness and muscle, against robust limits.
+    """Judge each window by amplitude, gradient, flatness, muscle, and noise beside the tags.
 
     Parameters
     ----------
@@ -195,6 +203,9 @@ def judge_windows(
     terms_hz : sequence of float
         Terms of the flicker and the line: within 1.5 bins of them nothing counts as muscle, so
         that a strong response does not speak against its window.
+    noise_beside : sequence of float, optional
+        Noise beside the tags in each window, over that of the median window of its condition; NaN
+        where nothing flickers.
 
     Returns
     -------
@@ -217,11 +228,16 @@ def judge_windows(
     }
     spans = list(bad_spans)
     verdicts = []
-    for window, figure in zip(windows, figures, strict=True):
+    beside = [math.nan] * len(windows) if noise_beside is None else noise_beside
+    for window, figure, noise in zip(windows, figures, beside, strict=True):
         limit = used[window.condition]
         reasons = [word for name, word in words.items() if not figure[name] <= limit[name]]
         if not figure["flat_uv"] >= limits.flat_uv:
             reasons.append("flat")
+        figure["noise_beside"] = float(noise)
+        limit = limit | {"noise_beside": limits.noise_beside}
+        if noise > limits.noise_beside:
+            reasons.append("noise beside the tags")
         begin_s = window.start_sample / sfreq_hz
         end_s = (window.start_sample + window.n_samples) / sfreq_hz
         reasons += [
@@ -230,7 +246,7 @@ def judge_windows(
             if onset_s < end_s and onset_s + duration_s > begin_s
         ]
         verdict = LEFT_OUT if reasons else KEPT
-        verdicts.append(WindowVerdict(window, verdict, tuple(reasons), figure, dict(limit)))
+        verdicts.append(WindowVerdict(window, verdict, tuple(reasons), figure, limit))
     return verdicts
 
 

@@ -6,10 +6,14 @@ from typing import Any
 
 import numpy as np
 
-from onbin import spectra, tagging
+from onbin import response, spectra, tagging
 from onbin.tagging import Term
 from onbin.windows import LEFT_OUT, Unplaced, Window, WindowVerdict, chain_gain
 
+# A response is there beyond doubt, at the best of all channels; and the most that the removal of
+# components may change it by.
+PRESENT_P, MOST_CHANGE = 1e-4, 0.02
+JUDGED_HARMONICS = (1, 2)  # of which the noise beside them is judged
 LIMIT_COLUMNS = {
     "peak_to_peak_uv": "peak_to_peak_limit_uv",
     "gradient_uv_per_ms": "gradient_limit_uv_per_ms",
@@ -63,7 +67,11 @@ def verdict_rows(
             "verdict": verdict.verdict,
             "reason": ", ".join(verdict.reasons) or None,
             **verdict.figures,
-            **{LIMIT_COLUMNS[name]: v for name, v in verdict.limits.items() if name != "flat_uv"},
+            **{
+                LIMIT_COLUMNS[name]: v
+                for name, v in verdict.limits.items()
+                if name in LIMIT_COLUMNS
+            },
         }
     for number, missing in enumerate(unplaced, start=len(verdicts) + 1):
         index = missing.index_in_trial
@@ -75,6 +83,59 @@ def verdict_rows(
             "verdict": LEFT_OUT,
             "reason": missing.reason,
         }
+
+
+def noise_beside(
+    region_uv: np.ndarray,
+    placed: Sequence[Window],
+    terms: Sequence[Term],
+    samples: Mapping[Term, int],
+    bins: Sequence[int],
+    rate_hz: float,
+    flickering: Mapping[str, Sequence[str]],
+) -> np.ndarray:
+    """Noise beside the tags in each window, over that of the median window of its condition.
+
+    It rests on the neighbouring bins of the tags' first two harmonics.
+
+    Parameters
+    ----------
+    region_uv : ndarray, shape (n_times,)
+        Mean of the region of the response, cleaned.
+    placed : sequence of Window
+    terms : sequence of Term
+    samples : mapping of Term to int
+    bins : sequence of int
+        Offsets of the neighbouring bins.
+    rate_hz : float
+    flickering : mapping
+        Tags that flicker, by condition.
+
+    Returns
+    -------
+    ndarray, shape (n_windows,)
+        NaN where nothing flickers.
+    """
+    ratios = np.full(len(placed), np.nan)
+    for condition, tags in flickering.items():
+        chosen = [i for i, window in enumerate(placed) if window.condition == condition]
+        driven = [term for term in terms if term.driven_by(tags)]
+        judged = [term for term in driven if term.harmonic in JUDGED_HARMONICS]
+        if not chosen or not judged:
+            continue
+        beside_uv = spectra.bin_coefficients(
+            region_uv[None],
+            np.array([placed[i].start_sample for i in chosen]),
+            np.array([placed[i].offset_s for i in chosen]),
+            rate_hz,
+            np.array([float(term.frequency) for term in judged]),
+            np.array([samples[term] for term in judged]),
+            np.array(bins),
+            [float(term.frequency) for term in driven],
+        )[:, 0]
+        noise_uv2 = (np.abs(beside_uv) ** 2).mean(axis=-1)
+        ratios[chosen] = (noise_uv2 / np.median(noise_uv2, axis=0)).mean(axis=-1)
+    return ratios
 
 
 def survival_rows(
@@ -139,6 +200,8 @@ def survival_rows(
         )
         (survival,) = chain_gain(removal(open_share), np.eye(len(names)), topography)
         filter_gain = filter_gains[term.tag, term.term]
+        at_peak_uv = coefficients[:, survival.peak_channel, 0, 0]
+        p = response.t2circ(at_peak_uv)[1] if len(chosen) > 1 else None
         yield {
             "tag": term.tag,
             "term": term.term,
@@ -148,4 +211,21 @@ def survival_rows(
             "gain": filter_gain * survival.gain,
             "peak_gain": filter_gain * survival.peak_gain,
             "topography_correlation": survival.correlation,
+            "t2circ_p": p,
         }
+
+
+def harmed_tags(rows: Sequence[Mapping[str, Any]]) -> list[str]:
+    """Tags of whose response the removal of components changes too much, the worst first.
+
+    Parameters
+    ----------
+    rows : rows
+        From `survival_rows`. Terms without a response do not count: their topography is noise.
+    """
+    changes = [
+        (abs(row["peak_gain"] / row["filter_gain"] - 1), row["tag"])
+        for row in rows
+        if row["t2circ_p"] is not None and row["t2circ_p"] < PRESENT_P
+    ]
+    return [tag for change, tag in sorted(changes, reverse=True) if change > MOST_CHANGE]
