@@ -18,7 +18,6 @@ from onbin.settings import load_settings, part
 # Jobs run side by side, so each takes one thread; it also keeps sums in one order.
 os.environ.setdefault("OMP_NUM_THREADS", "1")
 STARTED_S = time.monotonic()
-COMMAND = "snakemake --workflow-profile config/profiles/local"
 
 SETTINGS = Path(
     [*workflow.configfiles, Path(workflow.basedir) / "config" / "config.yaml"][0]
@@ -166,4 +165,4 @@ def closing_summary():
 
 
 def closing_failures():
-    return summary.failed(RESULTS, RECORDINGS, COMMAND)
+    return summary.failed(RESULTS, RECORDINGS, sys.argv[1:])

@@ -448,7 +448,7 @@ def load_settings(path: str | Path, changes: Mapping[str, Any] | None = None) ->
     """
     path = Path(path)
     raw, lines = _read_yaml(path)
-    raw = {**raw, **(changes or {})}
+    raw = {**raw, **{key: _from_shell(value) for key, value in (changes or {}).items()}}
     problems = [*_model_problems(raw), *_reference_problems(raw)]
     if not problems:
         settings = Settings.model_validate(raw)
@@ -462,6 +462,14 @@ def load_settings(path: str | Path, changes: Mapping[str, Any] | None = None) ->
     )
     mistakes = "1 mistake" if len(told) == 1 else f"{len(told)} mistakes"
     raise SettingsError(f"{path} has {mistakes}; nothing was run.\n{listed}")
+
+
+def _from_shell(value: Any) -> Any:
+    """Read what was given on the command line as the settings file would: true is no text."""
+    try:
+        return yaml.safe_load(value) if isinstance(value, str) else value
+    except yaml.YAMLError:
+        return value
 
 
 def json_schema() -> str:

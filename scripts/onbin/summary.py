@@ -1,5 +1,6 @@
 """What is said at the beginning and at the end of a run."""
 
+import shlex
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 
@@ -61,7 +62,7 @@ def closing(results: str, seconds: float) -> str:
     return "\n".join(lines)
 
 
-def failed(results: str, recordings: Sequence[Recording], command: str) -> str:
+def failed(results: str, recordings: Sequence[Recording], arguments: Sequence[str]) -> str:
     """Which steps failed of which recordings, why, and what to do; the verdict is last.
 
     Parameters
@@ -69,8 +70,8 @@ def failed(results: str, recordings: Sequence[Recording], command: str) -> str:
     results : str
     recordings : sequence of Recording
         Those of the study; what was left of others is not told.
-    command : str
-        Command that starts a run.
+    arguments : sequence of str
+        What Snakemake was started with.
     """
     scopes = {"study", *(r.name for r in recordings), *(r.participant for r in recordings)}
     left = [record for record in records.unfinished(results) if record.scope in scopes]
@@ -90,7 +91,7 @@ def failed(results: str, recordings: Sequence[Recording], command: str) -> str:
         header = "\t".join(decisions.HEADER)
         lines += [
             "Or go on without them: make the study from the rest with",
-            f"  {command} --config {LEAVE_OUT_FAILED}=true",
+            f"  {without_failed(arguments)}",
             "or decide it for good with these lines of the table of decisions (by tabs):",
             f"  {header}",
             *(f"  {line}" for line in pasted),
@@ -114,6 +115,19 @@ def failed_lines(left: Iterable[Record], recordings: Sequence[Recording]) -> lis
         decisions.suggest(stem, "recording", tables.MISSING, decisions.LEAVE_OUT, reason)
         for stem, reason in failed_recordings(left, recordings).items()
     ]
+
+
+def without_failed(arguments: Sequence[str]) -> str:
+    """Command that makes the study from the rest.
+
+    Examples
+    --------
+    >>> without_failed(["--configfile", "my study.yaml", "--", "report"])
+    "snakemake --configfile 'my study.yaml' --config leave_out_failed=true -- report"
+    """
+    end = list(arguments).index("--") if "--" in arguments else len(arguments)
+    switch = ["--config", f"{LEAVE_OUT_FAILED}=true"]
+    return shlex.join(["snakemake", *arguments[:end], *switch, *arguments[end:]])
 
 
 def _count(number: int, name: str) -> str:
