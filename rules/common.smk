@@ -149,15 +149,16 @@ def begin_run():
     try:
         before = records.claim(RESULTS)
     except OnbinError as error:
-        atexit.register(print, f"\n{error}")
-        raise
+        say_last(f"\n{error}")
+        sys.exit(1)
     atexit.register(records.release, RESULTS)
-    print(summary.opening([*everything(), result("manifest_files")], before, RESULTS))
+    there = summary.opening([*everything(), result("manifest_files")], before, RESULTS)
+    print(there, file=sys.stderr, flush=True)
 
 
 def say_last(text):
     """Say something after all that Snakemake has to say."""
-    atexit.register(print, text, flush=True)
+    atexit.register(print, text, file=sys.stderr, flush=True)
 
 
 def closing_summary():

@@ -2,6 +2,7 @@
 
 import json
 import os
+import re
 import socket
 import subprocess
 import sys
@@ -10,7 +11,7 @@ from pathlib import Path
 from types import SimpleNamespace
 
 import pytest
-from onbin import layout, provenance, tables
+from onbin import layout, provenance, records, tables
 from onbin.errors import DataError
 from onbin.runner import run
 
@@ -135,7 +136,12 @@ def test_a_users_mistake_is_one_message_without_traceback(job, capfd):
     message = "filter: channel Oz: found 3 samples, expected 100; record longer."
     assert out == ""
     assert err == f"\nsub-1/eeg/sub-1_task-x, {message}\n\n"
-    assert log_of(job) == f"ERROR {message}\n"
+    first, peak = log_of(job).splitlines()
+    assert first == f"ERROR {message}"
+    assert re.fullmatch(r"INFO peak memory: [1-9]\d* MiB", peak)
+    (record,) = records.unfinished(Path(job.log[0]).parents[2])
+    assert (record.step, record.scope) == ("filter", "sub-1/eeg/sub-1_task-x")
+    assert message.endswith(record.told)
 
 
 def test_what_is_unexpected_has_its_traceback_in_the_log_alone(job, capfd):
@@ -176,7 +182,8 @@ def test_logs_of_two_jobs_do_not_mix(job, tmp_path):
     run(step, job)
     first, job.log, job.params.settings = job.log, [str(tmp_path / "other.log")], {"level": 1}
     run(step, job)
-    assert (Path(first[0]).read_text(), log_of(job)) == ("0.05\n", "1\n")
+    logs = (Path(first[0]).read_text(), log_of(job))
+    assert [text.splitlines()[0] for text in logs] == ["0.05", "1"]
 
 
 def test_what_dead_processes_left_is_taken_away(job):

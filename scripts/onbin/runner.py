@@ -52,6 +52,13 @@ def run(step: Callable[..., None], job: Any) -> None:
                         _write_sidecar(path, job)
         except OnbinError as error:
             told = str(error)
+        except MemoryError:
+            log.error(traceback.format_exc())
+            told = (
+                "more memory was needed than there was. Run fewer jobs at once (--cores 1), or, "
+                "where a batch system sets the limit, give the step more (--set-resources "
+                f"{job.rule}:mem_mb=4000)."
+            )
         except OSError as error:
             log.error(traceback.format_exc())
             told = _of_the_system(error)
