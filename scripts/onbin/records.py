@@ -107,7 +107,7 @@ def unfinished(results: str | Path) -> Iterator[Record]:
     folder = Path(results) / layout.LOGS
     for path in sorted(folder.rglob(f"*{layout.RECORD_ENDING}")):
         record = read(path)
-        if record and not record.is_alive:
+        if record and (record.reason or not record.is_alive):
             yield record
 
 
