@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from onbin import response
+from onbin import circular, response
 from onbin.distributions import f_survival
 from scipy import stats
 
@@ -24,7 +24,7 @@ def within_binomial(hits, n, p):
 
 
 def test_t2circ_of_the_worked_example():
-    statistic, p = response.t2circ(EXAMPLE)
+    statistic, p = circular.t2circ(EXAMPLE)
     assert statistic == pytest.approx(2.1468832891, rel=1e-9)
     assert len(EXAMPLE) * statistic == pytest.approx(17.1750663130, rel=1e-9)
     assert p == pytest.approx(0.00017065246, rel=1e-6)
@@ -34,11 +34,11 @@ def test_t2circ_equals_coherence():
     # MSC = |Σz|²/(K·Σ|z|²), p = (1 − MSC)^(K−1) (Dobie & Wilson 1996)
     msc = abs(EXAMPLE.sum()) ** 2 / (8 * (abs(EXAMPLE) ** 2).sum())
     assert msc == pytest.approx(0.7104454685, rel=1e-9)
-    assert response.t2circ(EXAMPLE)[1] == pytest.approx((1 - msc) ** 7, rel=1e-9)
+    assert circular.t2circ(EXAMPLE)[1] == pytest.approx((1 - msc) ** 7, rel=1e-9)
 
 
 def test_t2circ_between_two_sets():
-    f, p = response.t2circ_two(EXAMPLE, SECOND)
+    f, p = circular.t2circ_two(EXAMPLE, SECOND)
     assert f == pytest.approx(3.0508397594, rel=1e-9)
     assert p == pytest.approx(0.0632924166, rel=1e-8)
 
@@ -234,7 +234,7 @@ def test_power_of_t2circ_follows_the_noncentral_f(amplitude_uv):
     # K·T²circ ~ F(2, 2K−2) with noncentrality K·A²/σ², σ² the variance of each part
     K = 16
     X = amplitude_uv + noise(np.random.default_rng(15), K, 20_000)
-    power = np.mean(response.t2circ(X)[1] < 0.05)
+    power = np.mean(circular.t2circ(X)[1] < 0.05)
     threshold = stats.f.isf(0.05, 2, 2 * K - 2)
     expected = stats.ncf.sf(threshold, 2, 2 * K - 2, K * amplitude_uv**2)
     assert power == pytest.approx(expected, abs=0.02)

@@ -2,6 +2,7 @@
 
 import hashlib
 import json
+import shutil
 import subprocess
 import sys
 from pathlib import Path
@@ -10,7 +11,7 @@ import numpy as np
 import pytest
 import yaml
 from conftest import digests, run_study
-from onbin import tables
+from onbin import layout, tables
 from workflow import DEMO, demo_settings, planned_jobs, snakemake, write_settings
 
 pytestmark = pytest.mark.workflow
@@ -115,7 +116,8 @@ def test_nothing_half_made_is_left_behind(demo):
         ("response", "neighbours", 8, {"spectra", "response", "study"}, {"components", "windows"}),
         ("response", "level", 0.01, {"response"}, {"spectra", "alpha", "components"}),
         ("alpha", "band_hz", [7.0, 12.0], {"alpha"}, {"spectra", "response", "filter"}),
-        ("components", "max_tag_share", 0.2, {"components", "windows"}, {"filter", "sensors"}),
+        ("components", "max_tag_share", 0.2, {"windows"}, {"filter", "sensors", "components"}),
+        ("sensors", "max_bad_share", 0.2, {"study"}, {"sensors", "windows"}),
         ("study", "title", "Another title", {"report", "describe"}, {"study", "response"}),
         ("trust", "min_windows", 12, {"study", "report"}, {"response", "alpha", "relation"}),
     ],
@@ -126,6 +128,73 @@ def test_a_changed_setting_reruns_what_uses_it(demo, section, key, value, reruns
     jobs = planned_jobs(demo.folder, write_settings(demo.folder / "changed.yaml", settings))
     assert reruns <= set(jobs)
     assert not spares & set(jobs)
+
+
+CHAIN = {"windows", "flicker", "spectra", "response", "alpha", "attention", "relation"}
+
+
+@pytest.mark.parametrize(
+    ("line", "reruns", "spares"),
+    [
+        (
+            "sub-01_task-panels\tchannel\tF3\tbad\tloose\tRK\t2026-03-31",
+            {"sensors", "components", *CHAIN},
+            {"intake", "filter"},
+        ),
+        (
+            "sub-01_task-panels\tcomponent\t{item}\tkeep\tno blinks\tRK\t2026-03-31",
+            CHAIN,
+            {"sensors", "components"},
+        ),
+        (
+            "sub-06_task-panels\trecording\tn/a\tkeep\tfor the pilot\tRK\t2026-03-31",
+            {"study"},
+            {"sensors", *CHAIN},
+        ),
+        (
+            "sub-06_task-panels\trecording\tn/a\tleave out\tmoved\tRK\t2026-03-31",
+            {"study", "plan"},
+            {"sensors", *CHAIN},
+        ),
+    ],
+)
+def test_a_decision_reruns_what_depends_on_it(demo, line, reruns, spares):
+    (verdicts,) = (demo.results / "sub-01").rglob("*_desc-components_verdicts.tsv")
+    first = tables.read_table(verdicts)[0]
+    table = demo.folder / "decisions.tsv"
+    item = f"{first['component']} {first['peak_channel']}"
+    table.write_text(
+        f"recording\tkind\titem\tverdict\treason\tby\tdate\n{line.format(item=item)}\n"
+    )
+    try:
+        jobs = planned_jobs(demo.folder, demo.settings)
+    finally:
+        table.unlink()
+    assert {name: jobs.get(name) for name in reruns} == dict.fromkeys(reruns, 1)  # of one person
+    assert not spares & set(jobs)
+
+
+@pytest.mark.parametrize(
+    ("line", "step", "told"),
+    [
+        ("channel\tF33\tbad", "sensors", "sub-01_task-panels has no 'F33'; did you mean F3?"),
+        ("component\t99 Oz\tkeep", "windows", "sub-01_task-panels has no '99 Oz'"),
+    ],
+)
+def test_a_decision_about_what_does_not_exist_names_its_line(demo, tmp_path, line, step, told):
+    folder = tmp_path / "copy"
+    shutil.copytree(demo.folder, folder)
+    (folder / "decisions.tsv").write_text(
+        "recording\tkind\titem\tverdict\treason\tby\tdate\n\n"
+        f"sub-01_task-panels\t{line}\tsee\tRK\tn/a\n"
+    )
+    target = layout.result("results", f"{step}_verdicts").format(
+        recording="sub-01/eeg/sub-01_task-panels"
+    )
+    done = snakemake(folder, folder / demo.settings.name, "--", target)
+    assert done.returncode == 1
+    assert f"decisions.tsv, line 3: {told}" in done.stdout + done.stderr
+    assert "Traceback" not in done.stdout + done.stderr
 
 
 @pytest.mark.parametrize(

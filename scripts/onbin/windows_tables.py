@@ -6,7 +6,8 @@ from typing import Any
 
 import numpy as np
 
-from onbin import response, spectra, tagging
+from onbin import spectra, tagging
+from onbin.circular import t2circ
 from onbin.tagging import Term
 from onbin.windows import LEFT_OUT, Unplaced, Window, WindowVerdict, chain_gain
 
@@ -201,7 +202,7 @@ def survival_rows(
         (survival,) = chain_gain(removal(open_share), np.eye(len(names)), topography)
         filter_gain = filter_gains[term.tag, term.term]
         at_peak_uv = coefficients[:, survival.peak_channel, 0, 0]
-        p = response.t2circ(at_peak_uv)[1] if len(chosen) > 1 else None
+        p = t2circ(at_peak_uv)[1] if len(chosen) > 1 else None
         yield {
             "tag": term.tag,
             "term": term.term,
