@@ -23,7 +23,7 @@ VERDICTS = [
 ]  # fmt: skip
 GAINS = [
     "tag", "term", "frequency_hz", "site", "filter_gain", "gain", "peak_gain",
-    "topography_correlation", "t2circ_p",
+    "topography_correlation", "t2circ_p", "region_gain", "region_t2circ_p",
 ]  # fmt: skip
 
 
@@ -100,6 +100,7 @@ def clean_and_cut(inputs, outputs, settings):
             samples,
             float(rate),
             flickering,
+            region,
         )
         return clean_uv, verdicts, list(survival)
 

@@ -104,6 +104,7 @@ def survivals(
         dict.fromkeys(terms, n_samples),
         RATE_HZ,
         FLICKERING,
+        [0, 1],
     )
     return {row["tag"]: row for row in rows}
 
@@ -123,6 +124,9 @@ def test_what_the_removal_takes_is_told(recorded):
     rows = survivals(recorded, lambda share: np.diag([1, 0.5, 1]))
     # topography (1, 4, −1) becomes (1, 2, −1): 10/18 by least squares, 10/√(18·6) as cosine
     assert rows["left"]["peak_gain"] == pytest.approx(0.5, rel=1e-9)
+    assert rows["left"]["region_gain"] == pytest.approx(
+        3 / 5, rel=1e-9
+    )  # O1 and Oz: (1 + 2)/(1 + 4)
     assert rows["left"]["gain"] == pytest.approx(10 / 18, rel=1e-9)
     assert rows["left"]["topography_correlation"] == pytest.approx(10 / np.sqrt(108), rel=1e-9)
     assert rows["right"]["gain"] == pytest.approx(1, rel=1e-9)
@@ -185,8 +189,11 @@ def test_noise_beside_the_tags_is_held_against_the_median_window():
 
 
 def test_harmed_tags_are_those_with_a_response_that_is_changed():
-    def row(tag, peak_gain, p, filter_gain=1.0):
-        return {"tag": tag, "peak_gain": peak_gain, "filter_gain": filter_gain, "t2circ_p": p}
+    def row(tag, peak_gain, p, filter_gain=1.0, region_gain=1.0, region_p=1e-9):
+        return {
+            "tag": tag, "peak_gain": peak_gain, "filter_gain": filter_gain, "t2circ_p": p,
+            "region_gain": region_gain * filter_gain, "region_t2circ_p": region_p,
+        }  # fmt: skip
 
     rows = [
         row("a", 0.97, 1e-9),
@@ -195,5 +202,7 @@ def test_harmed_tags_are_those_with_a_response_that_is_changed():
         row("d", 0.50, 0.01),  # noise
         row("e", 0.50, None),  # one window
         row("f", 0.97, 1e-9, filter_gain=0.98),  # the filters' doing
+        row("g", 1.0, 1e-9, region_gain=0.8),
+        row("h", 1.0, 1e-9, region_gain=0.8, region_p=0.01),
     ]
-    assert harmed_tags(rows) == ["b", "a"]
+    assert harmed_tags(rows) == ["g", "b", "a"]

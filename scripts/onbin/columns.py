@@ -165,6 +165,10 @@ COLUMNS = {
         "Measured gain at the term, 1 leaves it as it is: of the filters; or of the whole cleaning "
         "(filters, interpolation, reference, components) over all channels."
     ),
+    "region_gain": Column("That of the whole cleaning in the region of the response."),
+    "region_t2circ_p": Column(
+        "p of T²circ in the region of the response.", null="uniform", source=VICTOR_MAST
+    ),
     "filter_gain": Column("Gain of decimation and filters alone."),
     "peak_gain": Column(
         "That of the whole cleaning at the channel where the term is largest, which site names."

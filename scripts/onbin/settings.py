@@ -225,8 +225,9 @@ class Components(Part):
         "picard", description="ICA algorithm (extended where it can be); none leaves ICA out."
     )
     remove: dict[ComponentClass, Share] = Field(
-        {"eye": 0.7, "muscle": 0.9, "heart": 0.9, "channel noise": 0.9},
-        description="Classes that are removed, and the least probability for it.",
+        {"eye": 0.7, "muscle": 0.9, "channel noise": 0.9},
+        description="Classes that are removed, and the least probability for it. Add heart: 0.9 "
+        "where an ECG was recorded or the sheets of the components bear it out.",
     )
     max_tag_share: Share = Field(
         0.1,

@@ -11,9 +11,9 @@ from onbin.circular import t2circ
 from onbin.tagging import Term
 from onbin.windows import LEFT_OUT, Unplaced, Window, WindowVerdict, chain_gain
 
-# A response is there beyond doubt, at the best of all channels; and the most that the removal of
-# components may change it by.
-PRESENT_P, MOST_CHANGE = 1e-4, 0.02
+# A response is there hardly by chance, at the best of all channels or in its region; and the most
+# that the removal of components may change it by.
+PRESENT_P, MOST_CHANGE = 1e-3, 0.02
 JUDGED_HARMONICS = (1, 2)  # of which the noise beside them is judged
 LIMIT_COLUMNS = {
     "peak_to_peak_uv": "peak_to_peak_limit_uv",
@@ -150,6 +150,7 @@ def survival_rows(
     samples: Mapping[Term, int],
     rate_hz: float,
     flickering: Mapping[str, Sequence[str]],
+    region: Sequence[int],
 ) -> Iterator[dict[str, Any]]:
     """What the whole cleaning does to each term, by passing its own topography through.
 
@@ -174,6 +175,8 @@ def survival_rows(
     rate_hz : float
     flickering : mapping
         Tags that flicker, by condition.
+    region : sequence of int
+        Channels of the region of the response.
     """
     for term in terms:
         chosen = [window for window in kept if term.driven_by(flickering[window.condition])]
@@ -199,10 +202,12 @@ def survival_rows(
             ],
             axis=0,
         )
-        (survival,) = chain_gain(removal(open_share), np.eye(len(names)), topography)
         filter_gain = filter_gains[term.tag, term.term]
-        at_peak_uv = coefficients[:, survival.peak_channel, 0, 0]
-        p = t2circ(at_peak_uv)[1] if len(chosen) > 1 else None
+        cleaning = removal(open_share)
+        (survival,) = chain_gain(cleaning, np.eye(len(names)), topography)
+        region_before, region_after = (
+            abs(values[list(region)].mean()) for values in (topography, cleaning @ topography)
+        )
         yield {
             "tag": term.tag,
             "term": term.term,
@@ -212,8 +217,15 @@ def survival_rows(
             "gain": filter_gain * survival.gain,
             "peak_gain": filter_gain * survival.peak_gain,
             "topography_correlation": survival.correlation,
-            "t2circ_p": p,
+            "t2circ_p": _presence(coefficients[:, survival.peak_channel, 0, 0]),
+            "region_gain": filter_gain * region_after / region_before if region_before else None,
+            "region_t2circ_p": _presence(coefficients[:, list(region), 0, 0].mean(axis=1)),
         }
+
+
+def _presence(coefficients_uv: np.ndarray) -> float | None:
+    """P of T²circ against zero; None for a single window."""
+    return float(t2circ(coefficients_uv)[1]) if len(coefficients_uv) > 1 else None
 
 
 def harmed_tags(rows: Sequence[Mapping[str, Any]]) -> list[str]:
@@ -225,8 +237,9 @@ def harmed_tags(rows: Sequence[Mapping[str, Any]]) -> list[str]:
         From `survival_rows`. Terms without a response do not count: their topography is noise.
     """
     changes = [
-        (abs(row["peak_gain"] / row["filter_gain"] - 1), row["tag"])
+        (abs(row[gain] / row["filter_gain"] - 1), row["tag"])
         for row in rows
-        if row["t2circ_p"] is not None and row["t2circ_p"] < PRESENT_P
+        for gain, p in (("peak_gain", "t2circ_p"), ("region_gain", "region_t2circ_p"))
+        if row[p] is not None and row[p] < PRESENT_P
     ]
     return [tag for change, tag in sorted(changes, reverse=True) if change > MOST_CHANGE]
