@@ -7,6 +7,7 @@ from this module.
 import difflib
 import json
 import re
+import unicodedata
 from collections.abc import Hashable, Iterator, Mapping
 from fractions import Fraction
 from itertools import islice
@@ -21,7 +22,9 @@ from onbin.errors import SettingsError
 
 # No length, frequency or amplitude of such a study is larger; beyond it, sums take for ever.
 LARGEST = 1_000_000
+FREQUENCY_HZ = (0.1, 10_000)  # of flicker and displays: beyond it numbers are slips
 MOST_ENTRIES = 20_000  # of a settings file, aliases written out
+MOST_CHARACTERS = 1_000_000  # of a settings file; YAML is read slowly
 
 Label = Annotated[str, Field(pattern=r"^[a-z][a-z0-9_]*$")]
 Share = Annotated[float, Field(ge=0, le=1)]
@@ -37,17 +40,16 @@ def _rising(pair: list[float]) -> list[float]:
 
 
 def _exact_number(value: int | float | str) -> int | float | str:
-    written = not isinstance(value, str) or re.fullmatch(
-        r"\d{1,15}(\.\d{1,15})?|\d{1,15}/\d{1,15}", value
-    )
+    written = not isinstance(value, str) or re.fullmatch(r"[0-9]{1,15}([./][0-9]{1,15})?", value)
+    low_hz, high_hz = FREQUENCY_HZ
     try:
-        usable = bool(written) and 0 < tagging.exact(value) <= LARGEST
+        usable = bool(written) and tagging.exact(low_hz) <= tagging.exact(value) <= high_hz
     except (ValueError, ZeroDivisionError):
         usable = False
     if not usable:
         raise ValueError(
-            f"must be a positive number or ratio such as 120/7, at most {LARGEST}, found "
-            f"{_shown(value)}"
+            f"must be a positive number or ratio such as 120/7, from {low_hz:g} to {high_hz:g}, "
+            f"found {_shown(value)}"
         )
     return value
 
@@ -58,6 +60,18 @@ ExactNumber = Annotated[
     Field(description="a number, or a ratio such as 120/7"),
     AfterValidator(_exact_number),
 ]
+
+
+def _plain_path(path: str) -> str:
+    if not path.strip() or set(path) & set("{}\t\n") or path.startswith("~"):
+        raise ValueError(
+            "must be a path without braces and line ends, with the home folder written out in "
+            f"place of ~, found {_shown(path)}"
+        )
+    return path
+
+
+PlainPath = Annotated[str, AfterValidator(_plain_path)]
 ComponentClass = Literal["muscle", "eye", "heart", "line noise", "channel noise", "other"]
 
 
@@ -76,15 +90,15 @@ class Study(Part):
 class Dataset(Part):
     """Where recordings come from and results go."""
 
-    folder: str = Field(description="The BIDS dataset; it is only read.")
-    results: str = Field("results", description="Where everything that is made goes.")
+    folder: PlainPath = Field(description="The BIDS dataset; it is only read.")
+    results: PlainPath = Field("results", description="Where everything that is made goes.")
     tasks: list[str] = Field(
         [], description="Labels of the tasks to take, without task-; empty takes all."
     )
     participants: list[str] = Field(
         [], description="Labels of the participants to take, without sub-; empty takes all."
     )
-    decisions: str = Field(
+    decisions: PlainPath = Field(
         "decisions.tsv",
         description="What a person decided about recordings, channels and components: a table in "
         "the folder of the settings. It need not exist.",
@@ -157,7 +171,7 @@ class Tag(Part):
 class Condition(Part):
     """A condition: which events belong to it and what flickers in it."""
 
-    events: dict[str, str | int | float] = Field(
+    events: dict[str, str | Annotated[int, Field(ge=-(2**53), le=2**53)] | float] = Field(
         description="Column of events.tsv and the value that it must have; all of several. A BIDS "
         "entity (task, ses, acq, run) may stand in place of a column; entities alone make each "
         "such recording one trial.",
@@ -186,7 +200,7 @@ class Filter(Part):
         description="Edge of the low-pass; none takes 100, or above the highest term where that is "
         "higher, at most 0.45 of the working rate.",
     )
-    line_hz: Positive | None = Field(
+    line_hz: Annotated[float, Field(ge=10, le=1000)] | None = Field(
         None, description="Frequency of the mains; none takes what the dataset says."
     )
     line_removal: Literal["fit", "notch", "none"] = Field(
@@ -288,7 +302,9 @@ class Alpha(Part):
         2.0, description="The individual band reaches this far to each side of its frequency."
     )
     segment_s: Positive = Field(2.0, description="Segments of Welch's method.")
-    grid_hz: Positive = Field(0.25, description="Spacing of the power spectra.")
+    grid_hz: Annotated[float, Field(ge=0.01, le=LARGEST)] = Field(
+        0.25, description="Spacing of the power spectra."
+    )
     frequency_from: list[Label] = Field(
         [], description="Conditions that show the individual alpha frequency; empty takes all."
     )
@@ -429,7 +445,17 @@ def _no_tag(loader: _Loader, node: yaml.Node) -> None:
     )
 
 
+def _text_of_characters(loader: _Loader, node: yaml.ScalarNode) -> str:
+    text = loader.construct_scalar(node)
+    if any(unicodedata.category(c) in ("Cc", "Cs") and c not in "\t\n" for c in text):
+        raise yaml.constructor.ConstructorError(
+            None, None, f"{text!r} holds what is no character", node.start_mark
+        )
+    return text
+
+
 _Loader.add_constructor(yaml.resolver.BaseResolver.DEFAULT_MAPPING_TAG, _mapping_without_duplicates)
+_Loader.add_constructor(yaml.resolver.BaseResolver.DEFAULT_SCALAR_TAG, _text_of_characters)
 _Loader.add_constructor(None, _no_tag)
 
 
@@ -545,15 +571,24 @@ def _read_yaml(path: Path) -> tuple[dict, dict[tuple, int]]:
         raise SettingsError(
             f"{path} cannot be read ({error.strerror}); check its permissions and its path."
         ) from None
+    if len(text) > MOST_CHARACTERS:
+        raise SettingsError(
+            f"{path} has more than {MOST_CHARACTERS} characters, as no settings file has; begin "
+            "with a copy of config/config.yaml."
+        )
     try:
+        loader = _Loader(text)  # a SafeLoader: it builds plain values only
+        tree = loader.get_single_node()
         # counted before values are built: aliases of aliases can stand for billions of them
-        lines = list(islice(_key_lines(yaml.compose(text, Loader=_Loader)), MOST_ENTRIES + 1))
+        lines = list(islice(_key_lines(tree), MOST_ENTRIES + 1))
         if len(lines) > MOST_ENTRIES:
             raise SettingsError(
                 f"{path} has more than {MOST_ENTRIES} entries once its aliases (*name) are "
                 "written out; write out those that you need."
             )
-        raw = yaml.load(text, Loader=_Loader)  # a SafeLoader: it builds plain values only
+        raw = loader.construct_document(tree) if tree else None
+    except SettingsError:
+        raise
     except yaml.MarkedYAMLError as error:
         mark = error.problem_mark or error.context_mark
         place = f", line {mark.line + 1}, column {mark.column + 1}" if mark else ""
@@ -568,10 +603,10 @@ def _read_yaml(path: Path) -> tuple[dict, dict[tuple, int]]:
             f"{path} is nested too deeply, or an alias (*name) stands within what it stands for; "
             "write it out."
         ) from None
-    except ValueError as error:
+    except Exception as error:  # the reader raises whatever a date or a tag such as !!bool leads to
         raise SettingsError(
-            f"{path} holds a date or a number that cannot be ({str(error).split(';')[0]}); put it "
-            "between quotation marks if it is text."
+            f"{path} holds a value that cannot be what it looks like, such as a date or a number "
+            f"({str(error).split(';')[0]}); put it between quotation marks if it is text."
         ) from None
     if not isinstance(raw, dict):
         raise SettingsError(
@@ -596,7 +631,10 @@ def _shown(value: Any) -> str:
         return "nothing"
     if isinstance(value, bool):
         return str(value).lower()
-    text = repr(value)
+    try:
+        text = repr(value)
+    except ValueError:  # of a whole number that Python will not print
+        text = "a number of thousands of digits"
     return text if len(text) <= 60 else f"{text[:57]}..."
 
 
@@ -604,7 +642,7 @@ def _key_lines(node: yaml.Node | None, prefix: tuple = ()) -> Iterator[tuple[tup
     """Yield (key path as texts, line) of a YAML tree."""
     if isinstance(node, yaml.MappingNode):
         for key, value in node.value:
-            where = (*prefix, str(key.value))
+            where = (*prefix, str(key.value) if isinstance(key, yaml.ScalarNode) else "")
             yield where, key.start_mark.line + 1
             yield from _key_lines(value, where)
     elif isinstance(node, yaml.SequenceNode):
