@@ -46,4 +46,4 @@ rule audit:
     message:
         "audit: the flicker plan"
     shell:
-        "tee {log:q} < {input:q}"
+        "tee -- {log:q} < {input:q}"

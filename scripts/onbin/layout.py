@@ -6,7 +6,7 @@ Job graphs are built from this module, so it imports nothing heavy and reads fol
 import os
 import re
 from collections import defaultdict
-from collections.abc import Collection, Sequence
+from collections.abc import Collection, Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -207,6 +207,21 @@ def check_results(results: str | Path, folder: str | Path) -> None:
     if not nearest.is_dir() or not os.access(nearest, os.W_OK):
         found = "is a file" if not nearest.is_dir() else "cannot be written"
         raise SettingsError(f"dataset.results: {nearest} {found}. Choose another folder.")
+    for link in _links(place) if os.path.isdir(place) else ():
+        raise SettingsError(
+            f"dataset.results: {link} is a link, so what is made would land elsewhere. Put a "
+            "folder in its place; dataset.results itself may be a link."
+        )
+
+
+def _links(folder: Path, depth: int = 3) -> Iterator[Path]:
+    """Links to folders in a folder of results, as deep as its recordings lie."""
+    for path in (folder / name for name in _names(folder) if not name.startswith(".")):
+        if path.is_symlink():
+            if os.path.isdir(path):
+                yield path
+        elif depth and path.is_dir():
+            yield from _links(path, depth - 1)
 
 
 def find_recordings(
@@ -285,8 +300,10 @@ def participant_folders(folder: str | Path) -> list[str]:
 def _names(folder: Path) -> list[str]:
     try:
         return sorted(os.listdir(folder))
-    except PermissionError:
-        raise SettingsError(f"{folder} cannot be listed; ask for the right to read it.") from None
+    except OSError as error:
+        raise SettingsError(
+            f"{folder} cannot be listed ({error.strerror}); ask for the right to read it."
+        ) from None
 
 
 def _folders(parent: Path, prefix: str) -> list[str]:
@@ -336,12 +353,12 @@ def _check_name(name: str) -> None:
     """See that a recording's name is one of BIDS that results can be named after."""
     stem = name.rsplit("/", 1)[-1]
     found = entities(name)
-    advice = "Rename its files, or leave the recording out with dataset.participants or tasks."
+    advice = "Rename its files, or choose others with dataset.participants."
     if not re.fullmatch(RECORDING_PATTERN, name) or not all(
         re.fullmatch(r"[a-z]+-[A-Za-z0-9+]+", part) for part in stem.split("_")
     ):
         raise DataError(
-            f"{name}_eeg: expected a name of entities and labels of letters and digits, such as "
+            f"{f'{name}_eeg'!r}: expected a name of entities and labels of letters and digits, such as "
             f"sub-01_task-x_run-1_eeg. {advice}"
         )
     unknown = [key for key in found if key not in ENTITIES]
@@ -372,7 +389,8 @@ def _in_folder(dataset: Path, folder: Path, inherited: list[str]) -> list[Record
         if os.path.lexists(folder):
             _refuse_no_folder(folder)
         return []
-    names = _names(folder)
+    # a name that begins with a dot is a system's own, such as ._sub-01_task-x_eeg.edf
+    names = [name for name in _names(folder) if not name.startswith(".")]
     stems: dict[str, list[str]] = defaultdict(list)
     for name in names:
         for extension in EEG_FORMATS:
@@ -390,6 +408,9 @@ def _in_folder(dataset: Path, folder: Path, inherited: list[str]) -> list[Record
         others = [name for name in names if name != data and _belongs(name, stem)]
         files = [str(folder / data), *(str(folder / name) for name in others)]
         files += [path for path in inherited if _applies(path, stem)]
+        for path in files:
+            if set(path) & set("{}"):  # Snakemake would take them for a wildcard
+                raise DataError(f"{path!r} has braces in its name, as no file of BIDS; rename it.")
         name = (folder / stem).relative_to(dataset).as_posix()
         recordings.append(Recording(name, extensions[0], tuple(files)))
     return recordings
