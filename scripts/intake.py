@@ -44,7 +44,7 @@ def intake(inputs, outputs, settings):
     factor = tagging.decimation_factor(rate, least)
 
     data_uv = filtering.decimate(
-        lambda start, stop: raw.get_data(start=start, stop=stop) * 1e6,
+        lambda start, stop: dataset.read_samples_uv(raw, start, stop),
         raw.n_times,
         float(rate),
         factor,

@@ -2,7 +2,7 @@
 
 from pathlib import Path
 
-from onbin import filtering, layout, plan, plan_page, sidecars, tables
+from onbin import filtering, headers, layout, plan, plan_page, sidecars, tables
 from onbin.errors import SettingsError
 from onbin.plan import Recorded
 from onbin.runner import run
@@ -13,6 +13,8 @@ COLUMNS = [
     "planned_neighbours", "neighbours_left_out", "collides_with", "crowds", "in_alpha",
     "half_in_alpha", "planned_gain",
 ]  # fmt: skip
+
+REFRESH_HZ, LENGTH_M = (0.1, 100_000), (0.001, 1000)  # of displays; beyond it nothing is known
 
 
 def plan_flicker(inputs, outputs, settings):
@@ -65,20 +67,21 @@ def read_metadata(files):
     screen = sidecars.merged(files, "events.json").get("StimulusPresentation")
     screen = screen if isinstance(screen, dict) else {}
     size = screen.get("ScreenSize")
-    size_m = tuple(map(_positive, size)) if isinstance(size, list) and len(size) == 2 else (None,)
+    size = size if isinstance(size, list) and len(size) == 2 else (None,)
+    size_m = tuple(_within(LENGTH_M, length) for length in size)
     return Recorded(
-        rate_hz=_positive(told.get("SamplingFrequency")),
-        line_hz=_positive(told.get("PowerLineFrequency")),
-        refresh_hz=_positive(screen.get("ScreenRefreshRate")),
-        distance_m=_positive(screen.get("ScreenDistance")),
+        rate_hz=_within(headers.RATE_HZ, told.get("SamplingFrequency")),
+        line_hz=_within(sidecars.MAINS_HZ, told.get("PowerLineFrequency")),
+        refresh_hz=_within(REFRESH_HZ, screen.get("ScreenRefreshRate")),
+        distance_m=_within(LENGTH_M, screen.get("ScreenDistance")),
         size_m=size_m if all(size_m) else None,
     )
 
 
-def _positive(value):
-    """Take a number above 0; anything else, such as n/a, is not known."""
+def _within(bounds, value):
+    """Take a number within bounds; anything else, such as n/a, is not known."""
     is_number = isinstance(value, int | float) and not isinstance(value, bool)
-    return float(value) if is_number and value > 0 else None
+    return float(value) if is_number and bounds[0] <= value <= bounds[1] else None
 
 
 if "snakemake" in globals():

@@ -22,6 +22,7 @@ TEMPLATE_MONTAGE = "colin27_1005"
 AUXILIARY_TYPES = ("eog", "ecg")
 BLOCK_SAMPLES = 50_000
 EEG_SCALE_UV = (0.01, 100_000.0)  # what a channel's spread can be, whatever the amplifier
+LARGEST_UV = 1e30  # what single precision holds with room to spare
 
 
 def read_recording(
@@ -55,26 +56,26 @@ def read_recording(
     import mne_bids
 
     labels = layout.entities(name)
-    path = mne_bids.BIDSPath(
-        root=folder,
-        subject=labels["sub"],
-        session=labels.get("ses"),
-        task=labels.get("task"),
-        acquisition=labels.get("acq"),
-        run=labels.get("run"),
-        suffix="eeg",
-        datatype="eeg",
-        extension=extension,
-    )
     try:
+        path = mne_bids.BIDSPath(
+            root=folder,
+            subject=labels["sub"],
+            session=labels.get("ses"),
+            task=labels.get("task"),
+            acquisition=labels.get("acq"),
+            run=labels.get("run"),
+            suffix="eeg",
+            datatype="eeg",
+            extension=extension,
+        )
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
             raw = mne_bids.read_raw_bids(path, on_ch_mismatch="warn", verbose="error")
     except Exception as error:  # readers raise whatever a damaged file leads them to
-        log.error("the reader says: %s: %s", type(error).__name__, error)
-        raise DataError(
-            f"{path.fpath} cannot be read, though its length is what its header says; the log "
-            "tells what the reader says. Export the recording anew, or leave it out."
+        raise _refused_by_reader(
+            f"{folder}/{name}_eeg{extension} cannot be read, though its length is what its header "
+            "says",
+            error,
         ) from error
     raw.set_meas_date(None)  # none is kept, and dates are often shifted to what mne cannot write
     kinds = {name: channel.kind for name, channel in channels.items()}
@@ -82,6 +83,28 @@ def read_recording(
     raw.info["bads"] = [name for name, channel in channels.items() if channel.bad]
     raw.info["line_freq"] = line_hz
     return raw
+
+
+def read_samples_uv(raw, start: int, stop: int) -> np.ndarray:
+    """Samples of a recording from start to before stop, shape (n_channels, n_times).
+
+    Raises
+    ------
+    DataError
+        If the file does not hold what its header says.
+    """
+    try:
+        return raw.get_data(start=start, stop=stop) * 1e6
+    except Exception as error:  # as above
+        found = f"samples {start} to {stop} of {raw.n_times} cannot be read"
+        raise _refused_by_reader(found, error) from error
+
+
+def _refused_by_reader(found: str, error: Exception) -> DataError:
+    log.error("the reader says: %s: %s", type(error).__name__, error)
+    return DataError(
+        f"{found}; the log tells what the reader says. Export the recording anew, or leave it out."
+    )
 
 
 def check_events(events: str | Path | None) -> None:
@@ -444,6 +467,8 @@ def with_data(raw, data_uv: np.ndarray, rate_hz: float):
         info = raw.info.copy()
         with info._unlock():
             info["sfreq"] = rate_hz
+            for channel in info["chs"]:
+                channel["cal"] = channel["range"] = 1.0  # of the file that was read
             info["lowpass"] = min(info["lowpass"] or rate_hz / 2, rate_hz / 2)
         data_uv *= 1e-6
         working = mne.io.RawArray(data_uv, info, verbose="error")
@@ -470,7 +495,9 @@ def check_scale(data_uv: np.ndarray, raw) -> None:
         If samples are not finite, or the units must be wrong by orders of magnitude.
     """
     names = [
-        name for name, row in zip(raw.ch_names, data_uv, strict=True) if not np.isfinite(row).all()
+        name
+        for name, row in zip(raw.ch_names, data_uv, strict=True)
+        if not (np.abs(row) < LARGEST_UV).all()
     ]
     if names:
         raise DataError(

@@ -18,6 +18,7 @@ ANNOTATIONS = ("EDF Annotations", "BDF Annotations")  # not signals (EDF+, Kemp 
 SAMPLE_BYTES = {"INT_16": 2, "INT_32": 4, "IEEE_FLOAT_32": 4, "IEEE_FLOAT_64": 8}
 LINE_ENDS = 16  # so many line feeds, each behind a carriage return, are no chance
 CHUNK = 1 << 24
+RATE_HZ = (10, 100_000)  # what amplifiers record at; beyond it a header is damaged
 AGAIN = "Copy the recording anew, in binary mode, or leave it out."
 
 
@@ -79,7 +80,8 @@ def read_header(path: str | Path) -> Header:
     Raises
     ------
     DataError
-        If the header cannot be, or the file holds less or more than it says.
+        If the header cannot be, the file holds less or more than it says, or no amplifier records
+        at such a rate.
     """
     path = Path(path)
     readers: dict[str, Callable[[Path], Header]] = {
@@ -88,7 +90,14 @@ def read_header(path: str | Path) -> Header:
         ".bdf": _edf,
         ".set": _eeglab,
     }
-    return readers[path.suffix](path)
+    header = readers[path.suffix](path)
+    low_hz, high_hz = RATE_HZ
+    if not low_hz <= header.rate_hz <= high_hz:
+        raise DataError(
+            f"{path} says that it was recorded at {header.rate_hz:g} Hz, expected {low_hz} to "
+            f"{high_hz}; its header may be damaged. {AGAIN}"
+        )
+    return header
 
 
 def _brainvision(path: Path) -> Header:

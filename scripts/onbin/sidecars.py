@@ -30,6 +30,8 @@ OTHER_TYPES = (
 UNITS = ("m", "cm", "mm", MISSING)  # of EEGCoordinateUnits
 STATUSES = ("good", "bad", MISSING, "")
 TRIGGERS = "Status"  # BDF's own channel of triggers, which lists of channels often leave out
+LARGEST = 1e300  # JSON may hold larger numbers, which no float does
+MAINS_HZ = (10, 1000)  # railways have 16.7, aircraft 400
 DURATION_TOLERANCE_S = 1.0  # durations in sidecars are often rounded to seconds
 RATE_TOLERANCE = 1e-3  # BrainVision rounds the sampling interval, to whole µs in many programs
 
@@ -103,6 +105,8 @@ def read_json(path: str | Path) -> dict[str, Any]:
             f"{path}, line {error.lineno}, column {error.colno}: is not valid JSON ({error.msg}); "
             "correct it."
         ) from None
+    except ValueError as error:  # a number of thousands of digits
+        raise DataError(f"{path} is not valid JSON ({error}); correct it.") from None
     except RecursionError:
         raise DataError(f"{path} is nested too deeply; correct it.") from None
     if not isinstance(found, dict):
@@ -140,6 +144,12 @@ def check_eeg_json(told: Mapping[str, Any], header: Header, line_hz: float | Non
             f"SamplingFrequency in eeg.json is {rate_hz:g}. Correct whichever is wrong."
         )
     told_line_hz = _positive(told, "PowerLineFrequency", header)
+    low_hz, high_hz = MAINS_HZ
+    if told_line_hz and not low_hz <= told_line_hz <= high_hz:
+        raise DataError(
+            f"{header.path}: PowerLineFrequency in its eeg.json is {told_line_hz:g}, expected "
+            f"{low_hz} to {high_hz}, or n/a; correct it."
+        )
     if told.get("RecordingType") == "epoched":
         raise DataError(
             f"{header.path}: RecordingType in its eeg.json is epoched, expected continuous; take "
@@ -181,7 +191,7 @@ def _positive(told: Mapping[str, Any], key: str, header: Header) -> float | None
     if value is None or value == MISSING:
         return None
     is_number = isinstance(value, int | float) and not isinstance(value, bool)
-    if not is_number or not 0 < value < math.inf:
+    if not is_number or not 0 < value < LARGEST:
         raise DataError(
             f"{header.path}: {key} in its eeg.json is {value!r}, expected a number above 0; "
             "correct it."
