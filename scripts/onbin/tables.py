@@ -11,7 +11,7 @@ from onbin.columns import COLUMNS
 from onbin.errors import DataError
 
 MISSING = "n/a"
-FORMULA_STARTS = ("=", "+", "-", "@")
+FORMULA_STARTS = ("=", "+", "-", "@", "＝", "＋", "－", "＠")  # the last four are full-width
 ONE_LINE = str.maketrans("\t\n\r", "   ")  # a cell holds no tab and no line end
 
 
@@ -63,6 +63,8 @@ def read_numbered(path: str | Path) -> list[tuple[int, dict[str, str]]]:
         text = Path(path).read_text(encoding="utf-8-sig")
     except UnicodeDecodeError:
         raise DataError(f"{path} is not text in UTF-8; save it as UTF-8.") from None
+    except OSError as error:
+        raise DataError(f"{path} cannot be read ({error.strerror}).") from None
     numbered = enumerate(text.split("\n"), start=1)
     lines = [(number, _foreign_cells(line)) for number, line in numbered if line.strip()]
     if not lines:
@@ -115,7 +117,7 @@ def _written(value: Any) -> str:
     if isinstance(value, str):
         value = value.translate(ONE_LINE)
         # a cell that a spreadsheet would take for a formula is left a text
-        return f"'{value}" if value.startswith(FORMULA_STARTS) else value or MISSING
+        return f"'{value}" if _is_formula(value.lstrip("'")) else value or MISSING
     if isinstance(value, bool) or type(value).__name__ == "bool":
         return "true" if value else "false"
     if isinstance(value, Integral):
@@ -136,7 +138,11 @@ def _read(name: str, text: str) -> Any:
         return int(text)
     if kind == "boolean":
         return text == "true"
-    return text.removeprefix("'") if text[1:].startswith(FORMULA_STARTS) else text
+    return text.removeprefix("'") if _is_formula(text.lstrip("'")) else text
+
+
+def _is_formula(text: str) -> bool:
+    return text.startswith(FORMULA_STARTS)
 
 
 def header(path: str | Path) -> list[str]:
