@@ -47,6 +47,13 @@ def test_content_hash_beside_a_strangers_json(made, beside):
     assert provenance.content_hash(made) == ABC
 
 
+def test_what_a_dataset_notes_beside_a_recording_is_not_believed(tmp_path):
+    path = tmp_path / "sub-1_task-x_eeg.edf"
+    path.write_bytes(b"abc")
+    path.with_suffix(".json").write_text('{"Provenance": {"sha256": "forged"}}')
+    assert provenance.content_hash(path) == ABC
+
+
 def test_content_hash_of_a_json_itself(tmp_path):
     path = tmp_path / "task-x_eeg.json"
     path.write_bytes(b'{"Provenance": {"sha256": "noted"}}')
@@ -54,7 +61,7 @@ def test_content_hash_of_a_json_itself(tmp_path):
 
 
 def test_sidecar(made, tmp_path):
-    before, raw = tmp_path / "before.npz", tmp_path / "raw.edf"
+    before, raw = tmp_path / "sub-1_desc-y.npz", tmp_path / "raw.edf"
     before.write_bytes(b"1")
     before.with_suffix(".json").write_text('{"Provenance": {"sha256": "noted"}}')
     raw.write_bytes(b"abc")

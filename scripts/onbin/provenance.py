@@ -34,9 +34,12 @@ def sha256(path: str | Path) -> str:
 
 
 def content_hash(path: str | Path) -> str:
-    """SHA-256 of a file; for a file of ours taken from its sidecar, where it was noted."""
+    """SHA-256 of a file; for a file of ours taken from its sidecar, where it was noted.
+
+    What a dataset writes beside its recordings is not believed; they have no desc- in their names.
+    """
     beside = Path(layout.sidecar(path))
-    if beside != Path(path) and beside.is_file():
+    if "_desc-" in Path(path).name and beside != Path(path) and beside.is_file():
         try:
             noted = json.loads(beside.read_text(encoding="utf-8"))
         except (OSError, ValueError):
