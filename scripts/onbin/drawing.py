@@ -14,6 +14,7 @@ STYLE = {
     "axes.spines.right": False,
     **dict.fromkeys(("text.color", "axes.labelcolor", "xtick.color", "ytick.color"), INK),
     "legend.frameon": False,
+    "text.parse_math": False,  # a $ in a name is a $
     "figure.constrained_layout.use": True,
 }
 RESOLUTION_DPI = 130
@@ -40,6 +41,7 @@ def new_figure(width_in: float, height_in: float) -> Any:
     return Figure(figsize=(width_in, height_in))
 
 
+@styled  # ticks take their style when they are first drawn
 def save(figure: Any, path: str | Path, dpi: int = RESOLUTION_DPI) -> None:
     """Write a figure as PNG; the bytes depend on what it shows alone."""
     figure.savefig(path, dpi=dpi, metadata={"Software": None})

@@ -79,6 +79,7 @@ def words(name: str) -> str:
     return name.replace("_", " ")
 
 
+@styled
 def note(text: str) -> Any:
     """A figure that says why there is nothing to draw."""
     figure = new_figure(WIDTH_IN, 1.0)
