@@ -14,7 +14,7 @@ COLUMNS = [
     "half_in_alpha", "planned_gain",
 ]  # fmt: skip
 
-REFRESH_HZ, LENGTH_M = (0.1, 100_000), (0.001, 1000)  # of displays; beyond it nothing is known
+LENGTH_M = (0.001, 1000)  # of displays; beyond it nothing is known
 
 
 def plan_flicker(inputs, outputs, settings):
@@ -72,7 +72,7 @@ def read_metadata(files):
     return Recorded(
         rate_hz=_within(headers.RATE_HZ, told.get("SamplingFrequency")),
         line_hz=_within(sidecars.MAINS_HZ, told.get("PowerLineFrequency")),
-        refresh_hz=_within(REFRESH_HZ, screen.get("ScreenRefreshRate")),
+        refresh_hz=_within(plan.FREQUENCY_HZ, screen.get("ScreenRefreshRate")),
         distance_m=_within(LENGTH_M, screen.get("ScreenDistance")),
         size_m=size_m if all(size_m) else None,
     )

@@ -358,8 +358,8 @@ def _check_name(name: str) -> None:
         re.fullmatch(r"[a-z]+-[A-Za-z0-9+]+", part) for part in stem.split("_")
     ):
         raise DataError(
-            f"{f'{name}_eeg'!r}: expected a name of entities and labels of letters and digits, such as "
-            f"sub-01_task-x_run-1_eeg. {advice}"
+            f"{f'{name}_eeg'!r}: expected a name of entities and labels of letters and digits, "
+            f"such as sub-01_task-x_run-1_eeg. {advice}"
         )
     unknown = [key for key in found if key not in ENTITIES]
     if unknown or "task" not in found:

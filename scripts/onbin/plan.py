@@ -31,6 +31,7 @@ SETTINGS = (
     "alpha.band_hz",
     "alpha.search_hz",
 )
+FREQUENCY_HZ = (0.1, 10_000)  # of flicker and displays; beyond it numbers are slips
 FRAME_TOLERANCE = Fraction(1, 1000)  # how far a nominal frequency may be from whole frames
 OUTSIDE = "outside the filters"
 DRIVEN_BELOW_HZ = 200  # responses to flicker are lost in the noise well below (common practice)

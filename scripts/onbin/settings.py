@@ -22,7 +22,6 @@ from onbin.errors import SettingsError
 
 # No length, frequency or amplitude of such a study is larger; beyond it, sums take for ever.
 LARGEST = 1_000_000
-FREQUENCY_HZ = (0.1, 10_000)  # of flicker and displays: beyond it numbers are slips
 MOST_ENTRIES = 20_000  # of a settings file, aliases written out
 MOST_CHARACTERS = 1_000_000  # of a settings file; YAML is read slowly
 
@@ -41,7 +40,7 @@ def _rising(pair: list[float]) -> list[float]:
 
 def _exact_number(value: int | float | str) -> int | float | str:
     written = not isinstance(value, str) or re.fullmatch(r"[0-9]{1,15}([./][0-9]{1,15})?", value)
-    low_hz, high_hz = FREQUENCY_HZ
+    low_hz, high_hz = plan.FREQUENCY_HZ
     try:
         usable = bool(written) and tagging.exact(low_hz) <= tagging.exact(value) <= high_hz
     except (ValueError, ZeroDivisionError):
