@@ -129,6 +129,24 @@ def test_decimated_data_keep_bad_stretches_and_lose_other_marks():
     np.testing.assert_allclose(dataset.eeg_uv(working), raw.get_data()[:, ::2] * 1e6, rtol=1e-6)
 
 
+def test_the_scale_of_the_file_that_was_read_is_not_carried_on(tmp_path):
+    """A scale beyond single precision would be written as 0, and the signal could not be read."""
+    raw = raw_of()
+    raw.info["chs"][1]["cal"] = 1e-300
+    working = dataset.with_data(raw, raw.get_data() * 1e6, 200.0)
+    dataset.write_signal(working, tmp_path / "a_eeg.fif")
+    back = dataset.read_signal(tmp_path / "a_eeg.fif")
+    # single precision: 24 bits
+    np.testing.assert_allclose(dataset.eeg_uv(back), raw.get_data() * 1e6, rtol=1e-6)
+
+
+def test_samples_that_single_precision_cannot_hold_are_told_by_channel():
+    data_uv = raw_of().get_data() * 1e6
+    data_uv[2, 5] = 1e40
+    with pytest.raises(DataError, match="X9: some samples are not finite"):
+        dataset.check_scale(data_uv, raw_of())
+
+
 def test_recordings_of_one_person_need_one_rate():
     raws = [raw_of(rate_hz=256.0), raw_of(rate_hz=250.0)]
     with pytest.raises(DataError, match=r"different working rates .a: 256 Hz, b: 250 Hz."):

@@ -223,7 +223,12 @@ def test_tables_and_events(count):
             fuzzing.outcome(decisions.read, path, ["sub-01_task-x"])
             fuzzing.outcome(dataset.check_events, path)
             trials, _ = fuzzing.outcome(
-                dataset.read_trials, path, CONDITIONS, {"task": "x"}, recording_s=60.0
+                dataset.read_trials,
+                path,
+                CONDITIONS,
+                {"task": "x"},
+                recording_s=60.0,
+                rate_hz=200.0,
             )
             for trial in trials or ():
                 assert math.isfinite(trial["onset_s"])
@@ -326,6 +331,7 @@ def test_folders(count):
         with tempfile.TemporaryDirectory() as folder:
             root = Path(folder) / "data"
             root.mkdir()
+            (root / "dataset_description.json").touch()
             for parts, kind in [*sound, *entries]:
                 _make(root, parts, kind)
             found, _ = fuzzing.outcome(layout.find_recordings, root, tasks, participants)
@@ -341,6 +347,29 @@ def test_folders(count):
     some = st.sampled_from([[], [], [], ["x"], ["01"], [".."], ["*"]])
     fuzz(count, check, sound, ENTRIES, some, some)
     assert found_any, "no case had a recording"
+
+
+PATHS = st.one_of(
+    st.text(st.characters(exclude_characters="\0", exclude_categories=("Cs",)), max_size=8),
+    st.lists(NAMES, max_size=4).map("/".join),
+    st.sampled_from(["/", ".", "..", "data", "data/x", "data/derivatives/x", "loop", "loop/x",
+                     "file", "file/x", "x" * 5000, "x/" * 3000]),
+)  # fmt: skip
+
+
+@cases(20, 200)
+def test_paths(count):
+    def check(folder, results):
+        with tempfile.TemporaryDirectory() as place:
+            root = Path(place)
+            (root / "data").mkdir()
+            (root / "data" / "dataset_description.json").touch()
+            (root / "file").touch()
+            (root / "loop").symlink_to(root / "loop")
+            fuzzing.outcome(layout.check_results, root / results, root / folder)
+            fuzzing.outcome(layout.find_recordings, root / folder)
+
+    fuzz(count, check, PATHS, PATHS)
 
 
 # --- recordings -----------------------------------------------------------------------------------

@@ -6,7 +6,7 @@ import mne
 import pytest
 from onbin import headers
 from realdata import require
-from test_bad_input import CHANNELS, DURATION_S, FORMATS, RATE_HZ, write_dataset
+from test_bad_input import CHANNELS, DURATION_S, FORMATS, RATE_HZ, digits, write_dataset, write_edf
 
 READERS = {
     ".vhdr": mne.io.read_raw_brainvision,
@@ -63,3 +63,14 @@ def test_line_ends_are_counted_across_chunks(tmp_path, monkeypatch):
     path.write_bytes(b"\r\n" * 40)
     with pytest.raises(headers.DataError, match="each of 40 line feeds"):
         headers.require_binary(path)
+
+
+@pytest.mark.parametrize("record_s", ["1e12", "100", "1e-6", "1e-300"])
+def test_rates_of_no_amplifier_are_told(tmp_path, record_s):
+    path = tmp_path / "a.edf"
+    write_edf(path, digits())
+    content = bytearray(path.read_bytes())
+    content[244:252] = record_s.ljust(8).encode()
+    path.write_bytes(content)
+    with pytest.raises(headers.DataError, match=r"was recorded at .* Hz, expected 10 to 100000"):
+        headers.read_header(path)

@@ -5,6 +5,7 @@ from pathlib import Path
 
 import pytest
 from onbin import sidecars
+from onbin.errors import DataError
 from onbin.headers import Header
 
 HEADER = Header(Path("a_eeg.vhdr"), ("Oz", "Status"), 200.0, 6000)
@@ -52,3 +53,17 @@ def test_a_rate_that_was_rounded_is_the_same():
     header = Header(Path("a_eeg.vhdr"), ("Oz",), 1e6 / 3333, 6000)
     told = {"SamplingFrequency": 300, "PowerLineFrequency": 50}
     assert sidecars.check_eeg_json(told, header, None) == 50
+
+
+@pytest.mark.parametrize("line_hz", [1e-6, 1e6])
+def test_mains_of_no_country_are_told(line_hz):
+    told = {"SamplingFrequency": 200, "PowerLineFrequency": line_hz}
+    with pytest.raises(DataError, match="PowerLineFrequency in its eeg.json is 1e.06, expected 10"):
+        sidecars.check_eeg_json(told, HEADER, None)
+
+
+@pytest.mark.parametrize("value", [10**400, float("inf"), float("nan"), True, "200"])
+def test_numbers_that_are_none_are_told(value):
+    told = {"SamplingFrequency": value, "PowerLineFrequency": 50}
+    with pytest.raises(DataError, match="SamplingFrequency in its eeg.json is .* above 0"):
+        sidecars.check_eeg_json(told, HEADER, None)

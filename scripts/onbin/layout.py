@@ -203,9 +203,9 @@ def check_results(results: str | Path, folder: str | Path) -> None:
         raise SettingsError(
             f"dataset.results: {results} holds the dataset {folder}. Choose another folder."
         )
-    nearest = next(parent for parent in (place, *place.parents) if parent.exists())
-    if not nearest.is_dir() or not os.access(nearest, os.W_OK):
-        found = "is a file" if not nearest.is_dir() else "cannot be written"
+    nearest = next(parent for parent in (place, *place.parents) if os.path.exists(parent))
+    if not os.path.isdir(nearest) or not os.access(nearest, os.W_OK):
+        found = "is a file" if not os.path.isdir(nearest) else "cannot be written"
         raise SettingsError(f"dataset.results: {nearest} {found}. Choose another folder.")
     for link in _links(place) if os.path.isdir(place) else ():
         raise SettingsError(
@@ -220,7 +220,7 @@ def _links(folder: Path, depth: int = 3) -> Iterator[Path]:
         if path.is_symlink():
             if os.path.isdir(path):
                 yield path
-        elif depth and path.is_dir():
+        elif depth and os.path.isdir(path):
             yield from _links(path, depth - 1)
 
 
@@ -245,13 +245,13 @@ def find_recordings(
         links without content.
     """
     folder = Path(folder)
-    if not folder.is_dir():
-        found = "is a file" if folder.exists() else "does not exist"
+    if not os.path.isdir(folder):
+        found = "is a file" if os.path.exists(folder) else "does not exist"
         raise SettingsError(
             f"dataset.folder: {folder} {found}; give the folder that holds sub-… folders and "
             "dataset_description.json."
         )
-    if not (folder / "dataset_description.json").is_file():
+    if not os.path.isfile(folder / "dataset_description.json"):
         raise SettingsError(
             f"dataset.folder: {folder} has no dataset_description.json, which BIDS requires; give "
             "the folder that holds it, or write one with at least Name and BIDSVersion."
@@ -310,13 +310,13 @@ def _folders(parent: Path, prefix: str) -> list[str]:
     """Names of the folders that begin with a prefix; a file of such a name is a mistake."""
     names = [name for name in _names(parent) if name.startswith(prefix)]
     for name in names:
-        if not (parent / name).is_dir() and "." not in name:
+        if not os.path.isdir(parent / name) and "." not in name:
             _refuse_no_folder(parent / name)
-    return [name for name in names if (parent / name).is_dir()]
+    return [name for name in names if os.path.isdir(parent / name)]
 
 
 def _refuse_no_folder(path: Path) -> None:
-    found = "is a file" if path.exists() else "is a link that leads nowhere"
+    found = "is a file" if os.path.exists(path) else "is a link that leads nowhere"
     raise DataError(f"{path} {found}, expected a folder; remove it from the dataset.")
 
 
@@ -351,11 +351,11 @@ def _check_links(files: Sequence[str], folder: Path) -> None:
 
 def _check_name(name: str) -> None:
     """See that a recording's name is one of BIDS that results can be named after."""
-    stem = name.rsplit("/", 1)[-1]
-    found = entities(name)
+    *folders, _, stem = name.split("/")
+    parts, found = stem.split("_"), entities(name)
     advice = "Rename its files, or choose others with dataset.participants."
     if not re.fullmatch(RECORDING_PATTERN, name) or not all(
-        re.fullmatch(r"[a-z]+-[A-Za-z0-9+]+", part) for part in stem.split("_")
+        re.fullmatch(r"[a-z]+-[A-Za-z0-9+]+", part) for part in parts
     ):
         raise DataError(
             f"{f'{name}_eeg'!r}: expected a name of entities and labels of letters and digits, "
@@ -365,9 +365,11 @@ def _check_name(name: str) -> None:
     if unknown or "task" not in found:
         what = f"the entity {unknown[0]}- is not known here" if unknown else "there is no task-"
         raise DataError(f"{name}_eeg: {what}; expected {'-, '.join(ENTITIES)}-. {advice}")
-    if [f"{key}-{found[key]}" for key in ("sub", "ses") if key in found] != name.split("/")[:-2]:
+    if len(found) < len(parts):
+        raise DataError(f"{name}_eeg: an entity stands there twice. {advice}")
+    if parts[: len(folders)] != folders or ("ses" in found) != (len(folders) == 2):
         raise DataError(
-            f"{name}_eeg: sub- and ses- of the name are not those of its folder. {advice}"
+            f"{name}_eeg: sub- and ses- in front of the name are not those of its folder. {advice}"
         )
     if len(stem) > LONGEST_NAME:
         raise DataError(
@@ -378,14 +380,14 @@ def _check_name(name: str) -> None:
 
 def _data_files(folder: Path) -> list[str]:
     """Files of a folder that recordings below it may inherit."""
-    if not folder.is_dir():
+    if not os.path.isdir(folder):
         return []
     pattern = re.compile(r"(?:.*_)?(?:eeg|events|channels|electrodes|coordsystem)\.(?:json|tsv)$")
     return [str(folder / name) for name in _names(folder) if pattern.match(name)]
 
 
 def _in_folder(dataset: Path, folder: Path, inherited: list[str]) -> list[Recording]:
-    if not folder.is_dir():
+    if not os.path.isdir(folder):
         if os.path.lexists(folder):
             _refuse_no_folder(folder)
         return []
