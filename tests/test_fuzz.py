@@ -56,6 +56,7 @@ WORDS = st.sampled_from(
 NUMBERS = st.sampled_from(
     [0, 1, 2, -1, 3, 10**9, 10**30, 10**400, 0.1, 1e-300, 1e300, math.inf, math.nan]
 )
+FACTORS = (2, 3, 10, 1000, 0.5, 0.9, 1.1, 0.001, -1)
 SCALARS = st.one_of(
     st.none(), st.booleans(), st.integers(), st.floats(), st.text(), st.dates(), WORDS, NUMBERS
 )
@@ -83,16 +84,28 @@ def at(tree, path):
     return tree
 
 
+def numbers(tree):
+    """Key paths of all numbers that a tree holds and that can be multiplied, and the numbers."""
+    for path in places(tree):
+        value = at(tree, path)
+        is_number = isinstance(value, int | float) and not isinstance(value, bool)
+        if is_number and abs(value) < 1e300:
+            yield path, value
+
+
 @st.composite
 def changed_settings(draw):
-    """The demo's settings with values replaced, taken away, added and put elsewhere."""
+    """The demo's settings with values scaled, replaced, taken away, added and put elsewhere."""
     raw = yaml.safe_load(DEMO_SETTINGS.read_text(encoding="utf-8"))
     for _ in range(draw(st.integers(1, 4))):
         *parent, key = draw(st.sampled_from(list(places(raw))))
         holder = at(raw, parent)
         moved = at(DEMO, draw(st.sampled_from(list(places(DEMO)))))
         value = draw(st.one_of(SCALARS, TREES, st.just(moved)))
-        match draw(st.sampled_from(["replace", "replace", "delete", "add"])):
+        match draw(st.sampled_from(["scale", "scale", "replace", "replace", "delete", "add"])):
+            case "scale":  # so that some stay valid
+                (*parent, key), number = draw(st.sampled_from(list(numbers(raw))))
+                at(raw, parent)[key] = number * draw(st.sampled_from(FACTORS))
             case "replace":
                 holder[key] = value
             case "delete":

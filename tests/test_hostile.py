@@ -404,7 +404,7 @@ def test_numbers_stay_numbers(tmp_path):
 def test_settings_never_run_what_they_hold(tmp_path, text):
     path = tmp_path / "study.yaml"
     path.write_text(f"study:\n  title: {text}\n")
-    with pytest.raises(SettingsError, match="the tag .* has no meaning here; remove it"):
+    with pytest.raises(SettingsError, match=r"the tag .* has no meaning here; remove it"):
         load_settings(path)
 
 

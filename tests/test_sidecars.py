@@ -58,12 +58,12 @@ def test_a_rate_that_was_rounded_is_the_same():
 @pytest.mark.parametrize("line_hz", [1e-6, 1e6])
 def test_mains_of_no_country_are_told(line_hz):
     told = {"SamplingFrequency": 200, "PowerLineFrequency": line_hz}
-    with pytest.raises(DataError, match="PowerLineFrequency in its eeg.json is 1e.06, expected 10"):
+    with pytest.raises(DataError, match=r"PowerLineFrequency in its eeg\.json is 1e.06, expected"):
         sidecars.check_eeg_json(told, HEADER, None)
 
 
 @pytest.mark.parametrize("value", [10**400, float("inf"), float("nan"), True, "200"])
 def test_numbers_that_are_none_are_told(value):
     told = {"SamplingFrequency": value, "PowerLineFrequency": 50}
-    with pytest.raises(DataError, match="SamplingFrequency in its eeg.json is .* above 0"):
+    with pytest.raises(DataError, match=r"SamplingFrequency in its eeg\.json is .* above 0"):
         sidecars.check_eeg_json(told, HEADER, None)
