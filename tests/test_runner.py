@@ -144,6 +144,27 @@ def test_a_users_mistake_is_one_message_without_traceback(job, capfd):
     assert message.endswith(record.told)
 
 
+def test_a_link_in_the_place_of_a_log_is_replaced_and_not_followed(job, tmp_path):
+    path, victim = Path(job.log[0]), tmp_path / "victim.txt"
+    victim.write_text("mine")
+    path.parent.mkdir(parents=True)
+    path.symlink_to(victim)
+    run(make_both, job)
+    assert (victim.read_text(), path.is_symlink()) == ("mine", False)
+    assert "peak memory" in log_of(job)
+
+
+def test_names_that_are_no_text_are_logged(job):
+    name = os.fsdecode(b"sub-\xff")  # as Python shows a name of other bytes
+
+    def step(inputs, outputs, settings):
+        print(name)
+        make_both(inputs, outputs, settings)
+
+    run(step, job)
+    assert "sub-\\udcff\n" in log_of(job)
+
+
 def test_what_is_unexpected_has_its_traceback_in_the_log_alone(job, capfd):
     job.wildcards = Named()
     with pytest.raises(SystemExit) as ended:

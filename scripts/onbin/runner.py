@@ -150,7 +150,10 @@ def _open_log(path: str | None) -> TextIO:
     if path is None:
         return open(os.devnull, "w", encoding="utf-8")
     Path(path).parent.mkdir(parents=True, exist_ok=True)
-    return open(path, "w", encoding="utf-8", buffering=1)
+    if os.path.islink(path):  # what it leads to is not ours to write over
+        os.unlink(path)
+    # names of files need not be text in UTF-8
+    return open(path, "w", encoding="utf-8", errors="backslashreplace", buffering=1)
 
 
 def _log_warning(message: Warning | str, category: type[Warning], *_: object) -> None:
