@@ -487,6 +487,18 @@ BAD_RECORDINGS = {
         "02", of("02", patch("eeg.edf", 184, "512     ")), ["2560 bytes", "says 512", "anew"]),
     "edf_record_of_no_duration": (
         "02", of("02", patch("eeg.edf", 244, "0       ")), ["duration of a data record is '0'"]),
+    "edf_that_was_not_closed_and_cut_within_a_record": (
+        "02", of("02", lambda s: (patch("eeg.edf", 236, "-1      ")(s), cut("eeg.edf", 0.7)(s))),
+        ["does not say how many", "20 of 3600 bytes, 20 s, and 2832 bytes more", "anew"]),
+    "edf_that_was_not_closed_and_has_no_record": (
+        "02", of("02", lambda s: (patch("eeg.edf", 236, "-1      ")(s), cut("eeg.edf", 0.03)(s))),
+        ["does not say how many", "the file has 0 of 3600 bytes", "cut or changed"]),
+    "edf_without_samples_of_a_channel": (
+        "02", of("02", patch("eeg.edf", 256 + 9 * 216, "0       ")),
+        ["samples a record of Fp1 is '0'", "above 0", "anew"]),
+    "edf_with_fewer_samples_than_none": (
+        "02", of("02", patch("eeg.edf", 256 + 9 * 216 + 8, "-200    ")),
+        ["samples a record of Fp2 is '-200'", "above 0", "anew"]),
     "edf_interrupted": (
         "02", of("02", patch("eeg.edf", 192, "EDF+D")), ["interrupted (EDF+D)", "continuous"]),
     "edf_two_channels_of_one_name": (

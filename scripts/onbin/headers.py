@@ -211,15 +211,17 @@ def _edf(path: Path) -> Header:
         raise DataError(f"{path} has no signal but annotations. {AGAIN}")
     require_binary(path, int(header_bytes))
     record_bytes = sum(counts) * sample_bytes
-    data_bytes = size - int(header_bytes)
-    there, over = divmod(data_bytes, record_bytes)
+    there, over = divmod(size - int(header_bytes), record_bytes)
     if n_records == -1:
         log.warning("%s does not say how many data records it has; it was not closed", path)
-    elif (there, over) != (n_records, 0):
+        says = "does not say how many data records it has"
+        n_records = max(there, 1)
+    else:
+        says = f"says {n_records:g} data records, {n_records * record_s:g} s"
+    if (there, over) != (n_records, 0):
         raise DataError(
-            f"{path}: the header says {n_records:g} data records, {n_records * record_s:g} s in "
-            f"{n_records * record_bytes:.0f} bytes; the file has {there}, {there * record_s:g} s, "
-            f"in {data_bytes} bytes: it was cut or changed. {AGAIN}"
+            f"{path}: the header {says}; the file has {there} of {record_bytes} bytes, "
+            f"{there * record_s:g} s, and {over} bytes more: it was cut or changed. {AGAIN}"
         )
     per_record = max(counts[i] for i in channels)
     return Header(
