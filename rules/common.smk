@@ -37,6 +37,7 @@ try:
             records.unfinished(STUDY.dataset.results), FOUND
         )
     RECORDINGS = decisions.remaining(FOUND, LEFT_OUT)
+    layout.check_files(RECORDINGS)
 except OnbinError as error:
     sys.exit(f"\n{error}\n")
 

@@ -245,6 +245,7 @@ DAMAGES = (_flipped, _cut, _taken_out, _put_in, _another_number, _another_number
 def take_in(folder: Path, out: Path) -> None:
     """Find the recording of a dataset and take it in, as the workflow does."""
     recording = layout.find_recordings(folder)[0]
+    layout.check_files([recording])
     signal = out / "a_eeg.fif"
     settings = {
         "folder": str(folder),

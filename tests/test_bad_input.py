@@ -344,6 +344,7 @@ def intake(study, **changes):
     layout.check_results(settings.dataset.results, settings.dataset.folder)
     found = layout.find_recordings(settings.dataset.folder)
     (recording,) = [r for r in found if r.name == study.name]
+    layout.check_files([recording])
     own = {
         "folder": settings.dataset.folder,
         "recording": recording.name,
@@ -1074,7 +1075,7 @@ def test_a_dataset_that_cannot_be_used(study, case):
     damage, words = BAD_DATASETS[case]
     damage(study)
     with pytest.raises(OnbinError) as caught:
-        layout.find_recordings(study.root)
+        layout.check_files(layout.find_recordings(study.root))
     assert_plain(str(caught.value), str(study.root.parent) if "bids" in words[0] else "", *words)
 
 

@@ -348,6 +348,7 @@ def test_folders(count):
             for parts, kind in [*sound, *entries]:
                 _make(root, parts, kind)
             found, _ = fuzzing.outcome(layout.find_recordings, root, tasks, participants)
+            fuzzing.outcome(layout.check_files, found or ())
             for recording in found or ():
                 found_any.append(recording)
                 inside = layout.result("results", "intake_signal").format(recording=recording.name)

@@ -1,13 +1,14 @@
 """Which recordings a dataset has, which files belong to them, and where results go."""
 
 import re
+import shutil
 from pathlib import Path
 
 import pytest
-from onbin import layout
+from onbin import decisions, layout
 from onbin.errors import DataError, SettingsError
 from realdata import require
-from workflow import DEMO
+from workflow import DEMO, copy_workflow, demo_settings, planned_jobs, snakemake, write_settings
 
 
 @pytest.fixture
@@ -160,17 +161,38 @@ def test_a_choice_of_tasks_and_participants(dataset):
             SettingsError,
             r"dataset\.tasks: no recording of .* has task z; there are x",
         ),
-        (
-            ["sub-1/eeg/sub-1_task-x_eeg.edf", "sub-1/eeg/sub-1_task-x_eeg.set"],
-            {},
-            DataError,
-            r"sub-1_task-x_eeg stands there as \.edf and \.set; keep one",
-        ),
     ],
 )
 def test_what_cannot_be_used(dataset, files, choice, error, message):
     with pytest.raises(error, match=message):
         layout.find_recordings(dataset(*files), **choice)
+
+
+def test_a_recording_in_two_formats(dataset):
+    stems = ("sub-1/eeg/sub-1_task-x_eeg", "sub-2/eeg/sub-2_task-x_eeg")
+    folder = dataset(*(f"{stems[0]}{e}" for e in (".edf", ".set")),
+                     *(f"{stems[1]}{e}" for e in (".vhdr", ".eeg", ".vmrk")))  # fmt: skip
+    twofold, sound = layout.find_recordings(folder)
+    assert layout.check_files([sound]) is None
+    with pytest.raises(DataError, match=r"sub-1_task-x_eeg stands there as \.edf and \.set; keep"):
+        layout.check_files([sound, twofold])
+
+
+def test_a_recording_that_is_left_out_needs_no_content(tmp_path):
+    """Its link leads nowhere, which stops the run until somebody decides."""
+    shutil.copytree(DEMO, tmp_path / "data", ignore=shutil.ignore_patterns("sub-0[2-8]"))
+    (tmp_path / "data/sub-99/eeg").mkdir(parents=True)
+    (tmp_path / "data/sub-99/eeg/sub-99_task-panels_eeg.edf").symlink_to(tmp_path / "nowhere.edf")
+    chosen = demo_settings(dataset={"folder": "data"})
+    path = write_settings(copy_workflow(tmp_path) / "study.yaml", chosen)
+    refused = snakemake(tmp_path, path, "-n", "--quiet", "rules")
+    assert refused.returncode != 0
+    assert "nowhere.edf, which leads nowhere. Put the file there" in refused.stderr
+    (tmp_path / "decisions.tsv").write_text(
+        "\t".join(decisions.HEADER)
+        + "\nsub-99_task-panels\trecording\tn/a\tleave out\tlost\tAB\t2026-03-31\n"
+    )
+    assert planned_jobs(tmp_path, path)["intake"] == 1
 
 
 def test_no_folder(tmp_path):

@@ -227,7 +227,7 @@ def _links(folder: Path, depth: int = 3) -> Iterator[Path]:
 def find_recordings(
     folder: str | Path, tasks: Collection[str] = (), participants: Collection[str] = ()
 ) -> list[Recording]:
-    """List the EEG recordings of a BIDS dataset, by folder listings alone.
+    """List the EEG recordings of a BIDS dataset, by folder listings alone; see `check_files`.
 
     Parameters
     ----------
@@ -241,8 +241,7 @@ def find_recordings(
     SettingsError
         If the folder is no dataset or holds no such recording.
     DataError
-        If names are not those of BIDS, a recording stands there in two formats, or files are
-        links without content.
+        If names are not those of BIDS.
     """
     folder = Path(folder)
     if not os.path.isdir(folder):
@@ -288,8 +287,41 @@ def find_recordings(
             f"sub-01/eeg/sub-01_task-x_eeg{EEG_FORMATS[0]} ({', '.join(EEG_FORMATS)})."
         )
     _check_case([recording.name for recording in recordings])
-    _check_links([file for recording in recordings for file in recording.files], folder)
     return recordings
+
+
+def check_files(recordings: Sequence[Recording]) -> None:
+    """See that each recording stands there in one format, and that its files have content.
+
+    A dataset may be links to files that are fetched later, one by one.
+
+    Raises
+    ------
+    DataError
+        If one does not.
+    """
+    for recording in recordings:
+        data = [f"{recording.stem}_eeg{extension}" for extension in EEG_FORMATS]
+        formats = [Path(f).suffix for f in recording.files if Path(f).name in data]
+        if len(formats) > 1:
+            raise DataError(
+                f"{recording.name}_eeg stands there as {' and '.join(formats)}; "
+                "keep one of them, or move the other below sourcedata/."
+            )
+    files = {file for recording in recordings for file in recording.files}
+    broken = sorted(f for f in files if os.path.islink(f) and not os.path.exists(f))
+    if not broken:
+        return
+    first, target = broken[0], os.readlink(broken[0])
+    others = f" and {len(broken) - 1} more" if len(broken) > 1 else ""
+    if ".git/annex/" in target:
+        found, advice = (
+            "the content was not fetched",
+            "Fetch it with `datalad get` or `git annex get`",
+        )
+    else:
+        found, advice = f"a link to {target}, which leads nowhere", "Put the file there"
+    raise DataError(f"{first}{others}: {found}. {advice}, or leave the recording out.")
 
 
 def participant_folders(folder: str | Path) -> list[str]:
@@ -330,23 +362,6 @@ def _check_case(recordings: Sequence[str]) -> None:
                 f"{other} and {name} differ by capital letters only, which BIDS forbids; rename "
                 "one, or choose with dataset.participants."
             )
-
-
-def _check_links(files: Sequence[str], folder: Path) -> None:
-    """A dataset may be links to files that are fetched later, one by one."""
-    broken = sorted({file for file in files if os.path.islink(file) and not os.path.exists(file)})
-    if broken:
-        first, target = broken[0], os.readlink(broken[0])
-        others = f" and {len(broken) - 1} more" if len(broken) > 1 else ""
-        if ".git/annex/" in target:
-            raise DataError(
-                f"{first}{others}: the content was not fetched. Fetch it with `datalad get` or "
-                f"`git annex get` in {folder}, or choose others with dataset.participants."
-            )
-        raise DataError(
-            f"{first}{others}: a link to {target}, which leads nowhere. Put the file there, or "
-            "choose others with dataset.participants."
-        )
 
 
 def _check_name(name: str) -> None:
@@ -401,11 +416,6 @@ def _in_folder(dataset: Path, folder: Path, inherited: list[str]) -> list[Record
     recordings = []
     for stem, extensions in stems.items():
         _check_name((folder / stem).relative_to(dataset).as_posix())
-        if len(extensions) > 1:
-            raise DataError(
-                f"{folder}/{stem}_eeg stands there as {' and '.join(extensions)}; "
-                "keep one of them, or move the other below sourcedata/."
-            )
         data = f"{stem}_eeg{extensions[0]}"
         others = [name for name in names if name != data and _belongs(name, stem)]
         files = [str(folder / data), *(str(folder / name) for name in others)]
