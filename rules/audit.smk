@@ -2,9 +2,14 @@
 
 from onbin import plan
 
-# The JSON files that tell how recordings were made and shown.
+# The files that tell how recordings were made and shown, and of which channels.
 METADATA = sorted(
-    {p for r in RECORDINGS for p in r.files if p.endswith(("eeg.json", "events.json"))}
+    {
+        path
+        for recording in RECORDINGS
+        for path in recording.files
+        if path.endswith(("eeg.json", "events.json", "channels.tsv"))
+    }
 )
 
 
@@ -25,6 +30,8 @@ rule plan:
     params:
         settings=settings_part(
             *plan.SETTINGS,
+            "regions",
+            "sensors.reference",
             "dataset.folder",
             "dataset.tasks",
             "dataset.participants",

@@ -19,8 +19,6 @@ rule intake:
             "least_rate_hz",
             "flicker.photodiode",
             "filter.line_hz",
-            "regions",
-            "sensors.reference",
             "conditions.*.events",
             "conditions.*.duration_s",
             folder=STUDY.dataset.folder,

@@ -38,7 +38,7 @@ def intake(inputs, outputs, settings):
         row["position"] != "dataset" for row in channels
     ):
         log.warning("no position of electrodes.tsv could be used; see EEGCoordinateSystem")
-    dataset.require_channels(raw, settings["regions"], settings["sensors"]["reference"], photodiode)
+    dataset.require_photodiode(raw, photodiode)
     rate = tagging.exact_rate(raw.info["sfreq"])
     least = tagging.exact(settings["least_rate_hz"])
     factor = tagging.decimation_factor(rate, least)

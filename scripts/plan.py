@@ -1,9 +1,10 @@
 """The flicker plan: where every term of every tag lies, what that costs, and what to do."""
 
+from contextlib import suppress
 from pathlib import Path
 
 from onbin import filtering, headers, layout, plan, plan_page, sidecars, tables
-from onbin.errors import SettingsError
+from onbin.errors import DataError, SettingsError
 from onbin.plan import Recorded
 from onbin.runner import run
 
@@ -18,10 +19,12 @@ LENGTH_M = (0.001, 1000)  # of displays; beyond it nothing is known
 
 
 def plan_flicker(inputs, outputs, settings):
-    """Plan from settings and metadata; no recording is opened."""
+    """Plan from settings and metadata; only a recording without channels.tsv is opened."""
     chosen = settings["dataset"]
-    recordings = layout.find_recordings(chosen["folder"], chosen["tasks"], chosen["participants"])
-    recorded = [read_metadata(r.files) for r in recordings if r.name in settings["recordings"]]
+    found = layout.find_recordings(chosen["folder"], chosen["tasks"], chosen["participants"])
+    recordings = [r for r in found if r.name in settings["recordings"]]
+    recorded = [read_metadata(r.files) for r in recordings]
+    refuse(plan.lacking_channels(settings, eeg_by_recording(recordings)))
     plans = {}
     for setup in plan.setups(settings, recorded):
         refuse(plan.blocking(settings, setup))
@@ -39,6 +42,15 @@ def refuse(stops):
     told = [f"  {'.'.join(map(str, s.where))}: {s.found}; {s.advice}." for s in stops]
     if told:
         raise SettingsError("the flicker plan cannot work.\n" + "\n".join(told))
+
+
+def eeg_by_recording(recordings):
+    """EEG channels of each recording, but for those with damaged files, of which intake tells."""
+    names = {}
+    for recording in recordings:
+        with suppress(DataError):
+            names[recording.stem] = sidecars.eeg_names(recording.files)
+    return names
 
 
 def filter_gains(settings, setup):

@@ -253,8 +253,6 @@ def take_in(folder: Path, out: Path) -> None:
         "extension": recording.extension,
         "flicker": {"photodiode": None},
         "filter": {"line_hz": None},
-        "regions": {"occipital": ["O1"]},
-        "sensors": {"reference": "average"},
         "least_rate_hz": 100.0,
         "conditions": {"left": {"events": {"trial_type": "left"}, "duration_s": None}},
     }

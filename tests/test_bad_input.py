@@ -14,12 +14,13 @@ from types import SimpleNamespace
 import components as components_step
 import intake as intake_step
 import numpy as np
+import plan as plan_step
 import pytest
 import realdata
 import sensors as sensors_step
 import spectra as spectra_step
 import yaml
-from onbin import arrays, dataset, layout, tables
+from onbin import arrays, dataset, layout, plan, tables
 from onbin.errors import OnbinError, SettingsError
 from onbin.runner import run
 from onbin.settings import load_settings, part
@@ -354,6 +355,13 @@ def intake(study, **changes):
     return run_step(study, "intake", intake_step.intake, inputs, "intake", own, **changes)
 
 
+def plan_flicker(study, **changes):
+    settings = settings_of(study, **changes)
+    found = layout.find_recordings(settings.dataset.folder)
+    own = part(settings, *plan.SETTINGS) | {"recordings": [recording.name for recording in found]}
+    return run_step(study, "plan", plan_step.plan_flicker, {}, "audit", own, **changes)
+
+
 def judge_sensors(study, taken_in, **changes):
     inputs = {"signal": taken_in.output.signal, "recorded": taken_in.output.signal}
     own = {"decisions": [], "decisions_file": "decisions.tsv", "recording": Path(study.name).name}
@@ -368,14 +376,14 @@ def assert_plain(text, *words):
         assert trace not in text
 
 
-def assert_refused(study, capfd, call, *words, step="desc-intake"):
+def assert_refused(study, capfd, call, *words, step="desc-intake", lines=1):
     """The step ends with 1 and one message; nothing is left of its outputs."""
     with pytest.raises(SystemExit) as ended:
         call()
     assert ended.value.code == 1
     out, err = capfd.readouterr()
     assert out == ""
-    assert len(err.strip().splitlines()) == 1
+    assert len(err.strip().splitlines()) == lines
     assert err.rstrip().endswith(".")
     assert_plain(err, *words)
     left = [p.name for p in study.results.rglob("*") if p.is_file() or ".part-" in p.name]
@@ -421,6 +429,10 @@ def mangle_and_cut(study):
     size = study.data.stat().st_size
     mangle(b"\n", b"\r\n")(study)
     study.data.write_bytes(study.data.read_bytes()[:size])
+
+
+def both(*damages):
+    return lambda study: [damage(study) for damage in damages]
 
 
 def all_rows(kind="EEG", status="good"):
@@ -699,9 +711,54 @@ def test_a_real_file_whose_line_ends_were_changed(study, capfd, name):
 def test_a_region_whose_channels_are_not_there(study, capfd):
     regions = SETTINGS["regions"] | {"parietal": ["Pz", "POz", "P3"]}
     assert_refused(
-        study, capfd, lambda: intake(study, regions=regions),
-        "regions.parietal", "no EEG channel POz, P3", "it has Fp1, Fp2, Fz", "Change",
+        study, capfd, lambda: plan_flicker(study, regions=regions),
+        "regions.parietal: no EEG channel POz, P3 in sub-01_task-x, sub-02_task-x, sub-03_task-x, "
+        "only Fp1, Fp2, Fz, Cz, Pz, O1, Oz, O2; change it", step="plan", lines=2,
     )  # fmt: skip
+
+
+def test_channels_that_some_recordings_lack_are_told_at_once(study, capfd):
+    """By region, and by what is there; a channel that recorded eyes is no EEG."""
+    only("Fz", "Cz", "Oz")(study)
+    regions = {"occipital": ["O1", "Oz"], "front": ["Fp1"], "middle": ["Cz"], "eye": ["HEOG"]}
+    assert_refused(
+        study, capfd,
+        lambda: plan_flicker(study, regions=regions, sensors={"reference": ["TP9", "Fz"]}),
+        "regions.occipital: no EEG channel O1 in sub-01_task-x, only Fz, Cz, Oz; change",
+        "regions.front: no EEG channel Fp1 in sub-01_task-x, only Fz, Cz, Oz; change",
+        "regions.eye: no EEG channel HEOG in sub-01_task-x, only Fz",
+        "regions.eye: no EEG channel HEOG in sub-02_task-x, sub-03_task-x, only Fp1",
+        "sensors.reference: no EEG channel TP9 in sub-01_task-x, only Fz",
+        "sensors.reference: no EEG channel TP9 in sub-02_task-x, sub-03_task-x, only Fp1",
+        step="plan", lines=7,
+    )  # fmt: skip
+
+
+def test_channels_of_a_recording_without_a_table_are_those_of_its_header(study, capfd):
+    remove("channels.tsv")(study)
+    of("02", remove("channels.tsv"))(study)
+    assert_refused(
+        study, capfd, lambda: plan_flicker(study, regions=SETTINGS["regions"] | {"a": ["TP9"]}),
+        "no EEG channel TP9 in sub-01_task-x, sub-02_task-x, only Fp1, Fp2", "O2, HEOG;",
+        step="plan", lines=3,
+    )  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    "damage",
+    [
+        pytest.param(channels("Fz\tEEG"), id="table"),
+        pytest.param(both(remove("channels.tsv"), write("eeg.vhdr", "")), id="header"),
+    ],
+)
+def test_channels_of_a_damaged_recording_are_left_to_intake(study, damage):
+    damage(study)
+    assert tables.read_table(plan_flicker(study).output.terms)
+
+
+def test_a_sound_plan_is_made(study, capfd):
+    assert tables.read_table(plan_flicker(study).output.terms)
+    assert capfd.readouterr() == ("", "")
 
 
 def test_a_photodiode_that_is_not_there(study, capfd):
@@ -724,10 +781,6 @@ def test_an_event_that_belongs_to_two_conditions(study, capfd):
 
 def crlf(suffix):
     return lambda s: s.at(suffix).write_bytes(s.at(suffix).read_bytes().replace(b"\n", b"\r\n"))
-
-
-def both(*damages):
-    return lambda study: [damage(study) for damage in damages]
 
 
 def move_up(suffix):
@@ -930,16 +983,10 @@ def test_all_channels_bad(study, capfd):
 
 def test_one_channel_has_no_average(study, capfd):
     only("Oz")(study)
+    taken_in = intake(study)
     assert_refused(
-        study, capfd, lambda: intake(study, regions={"occipital": ["Oz"]}),
-        "sensors.reference", "average", "Oz alone", "as_recorded",
-    )  # fmt: skip
-
-
-def test_a_reference_that_is_not_there(study, capfd):
-    assert_refused(
-        study, capfd, lambda: intake(study, sensors={"reference": ["TP9", "Fz"]}),
-        "sensors.reference", "no EEG channel TP9", "it has Fp1", "Change",
+        study, capfd, lambda: judge_sensors(study, taken_in),
+        "sensors.reference", "average", "Oz alone", "as_recorded", step="desc-sensors",
     )  # fmt: skip
 
 
@@ -990,14 +1037,12 @@ def test_runs_of_one_person_with_different_rates(study, capfd):
 
 
 def test_runs_of_one_person_with_different_names(study, capfd):
-    """A name in other letters is another channel, told where it is first missed."""
-    run = second_run(study)
-    only("FZ", "CZ", "PZ", "O1", "OZ", "O2")(run)
-    assert intake(study).output
+    """A name in other letters is another channel."""
+    only("FZ", "CZ", "PZ", "O1", "OZ", "O2")(second_run(study))
     assert_refused(
-        replace(run, root=study.root), capfd, lambda: intake(run),
-        "run-2", "regions.occipital", "no EEG channel Oz", "it has FZ, CZ, PZ, O1, OZ, O2",
-        step="run-2_desc-intake",
+        study, capfd, lambda: plan_flicker(study),
+        "regions.occipital: no EEG channel Oz in sub-01_task-x_run-2, only FZ, CZ, PZ, O1, OZ, O2;",
+        step="plan", lines=2,
     )  # fmt: skip
 
 

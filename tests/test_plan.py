@@ -47,7 +47,7 @@ def load(tmp_path):
     def _load(raw):
         path = tmp_path / "study.yaml"
         path.write_text(yaml.safe_dump(raw, sort_keys=False))
-        return part(load_settings(path), *plan.SETTINGS)
+        return part(load_settings(path), *plan.SETTINGS, "regions", "sensors.reference")
 
     return _load
 
@@ -471,7 +471,7 @@ def test_the_display_of_the_settings_goes_before_the_datasets(load):
 
 
 def test_the_page_of_the_demo(tmp_path):
-    settings = part(load_settings(DEMO_SETTINGS), *plan.SETTINGS)
+    settings = part(load_settings(DEMO_SETTINGS), *plan.SETTINGS, "regions", "sensors.reference")
     rows, text = run_plan(settings, ROOT / "demo_bids", tmp_path / "out")
     assert "Display: 144 Hz by the settings; the dataset says 144 Hz for 8 of 8 recordings" in text
     assert "The plan can work as it stands." in text

@@ -385,6 +385,17 @@ def test_named_reference():
         interpolate_and_reference(raw, [], ["M1", "P9"])
 
 
+def test_the_average_of_one_channel_is_no_reference():
+    simulated = simulate(3, 10)
+    simulated.positions_m[:2] = np.nan
+    raw = simulated.raw(simulated.filtered_uv())
+    before = raw.get_data()
+    with pytest.raises(DataError, match="average of one channel, O2 alone, nothing is left"):
+        interpolate_and_reference(raw, ["O1", "Oz"], "average")
+    np.testing.assert_array_equal(raw.get_data(), before)
+    assert interpolate_and_reference(raw, ["O1", "Oz"], None).rank == 1
+
+
 def test_other_channels_are_left_as_they_are():
     simulated = simulate(24, 11)
     raw = simulated.raw(simulated.filtered_uv())

@@ -177,44 +177,14 @@ def _positions(raw) -> set[str]:
     }
 
 
-def require_channels(
-    raw,
-    regions: Mapping[str, Sequence[str]],
-    reference: str | Sequence[str],
-    photodiode: str | None,
-) -> None:
-    """See that a recording has the channels that the settings name.
-
-    Parameters
-    ----------
-    raw : mne.io.Raw
-    regions : mapping
-        Channels by region.
-    reference : str or sequence of str
-        As ``sensors.reference``.
-    photodiode : str, optional
+def require_photodiode(raw, photodiode: str | None) -> None:
+    """See that a recording has the channel of the light that the settings name, if they do.
 
     Raises
     ------
     DataError
-        If one is not there.
+        If it is not there.
     """
-    eeg = eeg_names(raw)
-    wanted = {f"regions.{region}": channels for region, channels in regions.items()}
-    if not isinstance(reference, str):
-        wanted["sensors.reference"] = reference
-    for key, names in wanted.items():
-        lacking = [name for name in names if name not in eeg]
-        if lacking:
-            raise DataError(
-                f"{key}: the recording has no EEG channel {', '.join(lacking)}; it has "
-                f"{', '.join(eeg)}. Change {key} in the settings, or leave the recording out."
-            )
-    if reference == "average" and len(eeg) == 1:
-        raise DataError(
-            f"sensors.reference: against the average of one channel, {eeg[0]} alone, nothing is "
-            "left. Set it to as_recorded."
-        )
     if photodiode and photodiode not in raw.ch_names:
         raise DataError(
             f"flicker.photodiode: the recording has no channel {photodiode}; it has "

@@ -269,6 +269,35 @@ def _stop(where: tuple, found: str, advice: str) -> Finding:
     return Finding("stop", where, found, advice)
 
 
+def lacking_channels(settings: Mapping, eeg: Mapping[str, Sequence[str]]) -> Iterator[Finding]:
+    """Find channels of regions and of the reference that recordings lack.
+
+    Parameters
+    ----------
+    settings : mapping
+        ``regions`` and ``sensors.reference``.
+    eeg : mapping
+        Names of the EEG channels by recording.
+    """
+    wanted = {("regions", region): names for region, names in settings["regions"].items()}
+    reference = settings["sensors"]["reference"]
+    if not isinstance(reference, str):
+        wanted["sensors", "reference"] = reference
+    for where, names in wanted.items():
+        alike: dict[tuple, list[str]] = defaultdict(list)
+        for recording, present in eeg.items():
+            alike[tuple(present)].append(recording)
+        for present, recordings in alike.items():
+            missing = [name for name in names if name not in present]
+            if missing:
+                yield _stop(
+                    where,
+                    f"no EEG channel {', '.join(missing)} in {', '.join(recordings)}, only "
+                    f"{', '.join(present) or 'none at all'}",
+                    "change it in the settings, or leave those recordings out",
+                )
+
+
 def _beyond_window(settings: Mapping, name: str, frequency: Fraction) -> Iterator[Finding]:
     length_s = settings["windows"]["length_s"]
     if frequency * tagging.exact(length_s) < 1:

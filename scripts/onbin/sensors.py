@@ -541,6 +541,12 @@ def interpolate_and_reference(
             f"{FEWEST_FOR_MEDIAN} are needed: look at the limits for channels, or leave the "
             "recording out."
         )
+    if reference == "average" and len(locations_m) - len(left_out) == 1:
+        (alone,) = locations_m.keys() - left_out.keys()
+        raise DataError(
+            f"sensors.reference: against the average of one channel, {alone} alone, nothing is "
+            "left. Set it to as_recorded."
+        )
     raw.drop_channels(list(left_out))
     raw.info["bads"] = list(interpolated)
     if interpolated:

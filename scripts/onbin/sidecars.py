@@ -10,7 +10,7 @@ from typing import Any
 
 from onbin import layout
 from onbin.errors import DataError
-from onbin.headers import Header
+from onbin.headers import Header, read_header, require_files
 from onbin.tables import MISSING, read_numbered
 
 log = logging.getLogger("onbin")
@@ -217,6 +217,40 @@ def read_channels(files: Iterable[str], header: Header) -> dict[str, Channel]:
     if path is None:
         log.warning("no channels.tsv: types are those of the data file, and no channel is bad")
         return {}
+    channels = _listed(path)
+    absent = [name for name in channels if name not in header.channels]
+    unlisted = [n for n in header.channels if n not in channels and n != TRIGGERS]
+    if absent or unlisted:
+        raise DataError(
+            f"{path} and {header.path.name} have different channels: "
+            f"{', '.join(absent) or 'none'} in the table alone, {', '.join(unlisted) or 'none'} "
+            "in the data file alone. Give the table one row a channel, named as in the data file."
+        )
+    return channels
+
+
+def eeg_names(files: Sequence[str]) -> list[str]:
+    """Names of a recording's EEG channels; where no channels.tsv tells types, of all channels.
+
+    Parameters
+    ----------
+    files : sequence of str
+        As in `layout.Recording`.
+
+    Raises
+    ------
+    DataError
+        If the file that tells them cannot be understood.
+    """
+    path = next(iter(nearest(files, "channels.tsv")), None)
+    require_files([path or files[0]])
+    if path is None:
+        return list(read_header(files[0]).channels)
+    return [name for name, channel in _listed(path).items() if channel.kind == "eeg"]
+
+
+def _listed(path: str) -> dict[str, Channel]:
+    """Channels of a channels.tsv by name."""
     rows = read_numbered(path)
     _require_columns(path, rows, ("name", "type"))
     lines: dict[str, int] = {}
@@ -240,14 +274,6 @@ def read_channels(files: Iterable[str], header: Header) -> dict[str, Channel]:
             )
         lines[name] = number
         channels[name] = Channel(KEPT_TYPES.get(kind, "misc"), status == "bad")
-    absent = [name for name in channels if name not in header.channels]
-    unlisted = [n for n in header.channels if n not in channels and n != TRIGGERS]
-    if absent or unlisted:
-        raise DataError(
-            f"{path} and {header.path.name} have different channels: "
-            f"{', '.join(absent) or 'none'} in the table alone, {', '.join(unlisted) or 'none'} "
-            "in the data file alone. Give the table one row a channel, named as in the data file."
-        )
     return channels
 
 
