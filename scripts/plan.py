@@ -1,9 +1,10 @@
 """The flicker plan: where every term of every tag lies, what that costs, and what to do."""
 
+from collections import defaultdict
 from contextlib import suppress
 from pathlib import Path
 
-from onbin import filtering, headers, layout, plan, plan_page, sidecars, tables
+from onbin import filtering, headers, layout, plan, plan_page, sidecars, tables, tagging
 from onbin.errors import DataError, SettingsError
 from onbin.plan import Recorded
 from onbin.runner import run
@@ -24,6 +25,7 @@ def plan_flicker(inputs, outputs, settings):
     found = layout.find_recordings(chosen["folder"], chosen["tasks"], chosen["participants"])
     recordings = [r for r in found if r.name in settings["recordings"]]
     recorded = [read_metadata(r.files) for r in recordings]
+    require_common_rates(settings, recordings, recorded)
     refuse(plan.lacking_channels(settings, eeg_by_recording(recordings)))
     plans = {}
     for setup in plan.setups(settings, recorded):
@@ -42,6 +44,18 @@ def refuse(stops):
     told = [f"  {'.'.join(map(str, s.where))}: {s.found}; {s.advice}." for s in stops]
     if told:
         raise SettingsError("the flicker plan cannot work.\n" + "\n".join(told))
+
+
+def require_common_rates(settings, recordings, recorded):
+    """See that the recordings of each participant would be brought to one rate."""
+    least = plan.assumed_setup(settings).working_rate
+    rates = defaultdict(dict)
+    for recording, told in zip(recordings, recorded, strict=True):
+        if told.rate_hz:
+            rate = plan.working_rate(tagging.exact_rate(told.rate_hz), least)
+            rates[recording.participant][recording.name] = rate
+    for of_participant in rates.values():
+        tagging.common_rate(of_participant)
 
 
 def eeg_by_recording(recordings):

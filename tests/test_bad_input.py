@@ -1034,6 +1034,12 @@ def test_runs_of_one_person_with_different_rates(study, capfd):
         "different working rates", "sub-01_task-x: 200 Hz", "run-2: 250 Hz",
         "intake.working_rate_hz", step="desc-terms",
     )  # fmt: skip
+    assert_refused(  # the plan tells it before anything is read
+        study, capfd, lambda: plan_flicker(study),
+        "different working rates", "sub-01_task-x: 200 Hz", "run-2: 250 Hz", step="plan",
+    )  # fmt: skip
+    tell(SamplingFrequency=400)(runs[1])  # which leaves 200 Hz
+    assert plan_flicker(study, intake={"working_rate_hz": 200.0}).output
 
 
 def test_runs_of_one_person_with_different_names(study, capfd):

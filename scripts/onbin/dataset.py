@@ -495,10 +495,4 @@ def common_rate(raws: Sequence[Any], recordings: Sequence[str]) -> Fraction:
         If they differ.
     """
     rates = [tagging.exact_rate(raw.info["sfreq"]) for raw in raws]
-    if len(set(rates)) > 1:
-        listed = ", ".join(f"{n}: {float(r):g} Hz" for n, r in zip(recordings, rates, strict=True))
-        raise DataError(
-            f"the recordings have different working rates ({listed}). Set intake.working_rate_hz "
-            "to a rate that all can be decimated to, or leave recordings out."
-        )
-    return rates[0]
+    return tagging.common_rate(dict(zip(recordings, rates, strict=True)))

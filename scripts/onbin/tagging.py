@@ -8,6 +8,8 @@ from dataclasses import dataclass, replace
 from fractions import Fraction
 from math import ceil, gcd, lcm
 
+from onbin.errors import DataError
+
 USUAL_RATE_HZ = 250.0  # components are labelled by networks trained at this rate and above
 USUAL_PASSBAND_HZ = 100.0  # holds the muscle band, by which components and windows are judged
 ANTIALIAS_PASSBAND = 0.4  # end of what decimation lets pass, over the rate that it leaves
@@ -62,6 +64,28 @@ def exact_rate(sampling_rate_hz: float) -> Fraction:
     Fraction(1000, 3)
     """
     return Fraction(sampling_rate_hz).limit_denominator(RATE_DENOMINATOR)
+
+
+def common_rate(rates: Mapping[str, Fraction]) -> Fraction:
+    """Working rate in Hz that a participant's recordings share.
+
+    Parameters
+    ----------
+    rates : mapping
+        Of each recording, by its name.
+
+    Raises
+    ------
+    DataError
+        If they differ.
+    """
+    if len(set(rates.values())) > 1:
+        listed = ", ".join(f"{name}: {float(rate):g} Hz" for name, rate in rates.items())
+        raise DataError(
+            f"the recordings have different working rates ({listed}). Set intake.working_rate_hz "
+            "to a rate that all can be decimated to, or leave recordings out."
+        )
+    return next(iter(rates.values()))
 
 
 def decimation_factor(rate: Fraction, least: Fraction) -> int:
