@@ -118,6 +118,7 @@ def test_nothing_half_made_is_left_behind(demo):
         ("alpha", "band_hz", [7.0, 12.0], {"alpha"}, {"spectra", "response", "filter"}),
         ("components", "max_tag_share", 0.2, {"windows"}, {"filter", "sensors", "components"}),
         ("sensors", "max_bad_share", 0.2, {"study"}, {"sensors", "windows"}),
+        ("regions", "occipital", ["O1", "Oz"], {"plan", "response"}, {"intake", "components"}),
         ("study", "title", "Another title", {"report", "describe"}, {"study", "response"}),
         ("trust", "min_windows", 12, {"study", "report"}, {"response", "alpha", "relation"}),
     ],
