@@ -22,7 +22,15 @@ from onbin.drawing import save
 from onbin.errors import DataError, SettingsError
 from onbin.settings import load_settings
 from test_report import CHANNELS, Study, study_settings
-from workflow import DEMO, ROOT, copy_workflow, demo_settings, snakemake, write_settings
+from workflow import (
+    DEMO,
+    DEMO_SETTINGS,
+    ROOT,
+    copy_workflow,
+    demo_settings,
+    snakemake,
+    write_settings,
+)
 
 # --- the page -------------------------------------------------------------------------------------
 
@@ -406,6 +414,12 @@ def test_settings_never_run_what_they_hold(tmp_path, text):
     path.write_text(f"study:\n  title: {text}\n")
     with pytest.raises(SettingsError, match=r"the tag .* has no meaning here; remove it"):
         load_settings(path)
+
+
+@pytest.mark.parametrize("text", ["2001-02-31", "!!bool x", "[", "!!python/name:os.system"])
+def test_what_the_command_line_gives_is_told_as_what_the_file_holds(text):
+    with pytest.raises(SettingsError, match=r"seed: must be a whole number, found '"):
+        load_settings(DEMO_SETTINGS, {"seed": text})
 
 
 def test_arrays_of_objects_are_refused(tmp_path):

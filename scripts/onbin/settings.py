@@ -494,7 +494,7 @@ def _from_shell(value: Any) -> Any:
     """Read what was given on the command line as the settings file would: true is no text."""
     try:
         return yaml.safe_load(value) if isinstance(value, str) else value
-    except yaml.YAMLError:
+    except Exception:  # as where the file is read; the model tells what was expected
         return value
 
 
