@@ -85,7 +85,7 @@ def note(path: Path, step: str, scope: str, reason: str | None = None) -> None:
     path.parent.mkdir(parents=True, exist_ok=True)
     record = Record(step, scope, socket.gethostname(), process(os.getpid()), reason)
     making = path.with_name(f".part-{os.getpid()}-{path.name}")
-    making.write_text(json.dumps(asdict(record), indent=2, ensure_ascii=False), encoding="utf-8")
+    making.write_text(json.dumps(asdict(record), indent=2, ensure_ascii=True), encoding="utf-8")
     os.replace(making, path)
 
 
