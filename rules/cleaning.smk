@@ -102,8 +102,6 @@ rule windows:
             "components.max_tag_share",
             "regions",
             "relation.response_region",
-            "response.neighbours",
-            "response.skip",
             "filter.lowpass_hz",
             "terms",
             "conditions.*.flickering",

@@ -62,9 +62,6 @@ def clean_and_cut(inputs, outputs, settings):
     )
     names = dataset.eeg_names(raw)
     region = [names.index(name) for name in response_channels(settings) if name in names]
-    bins = tagging.neighbour_offsets(
-        settings["response"]["neighbours"], settings["response"]["skip"]
-    )
 
     def attempt(before_uv, judged):
         """Take out the components that go, judge the windows, see what is left of the response."""
@@ -84,7 +81,6 @@ def clean_and_cut(inputs, outputs, settings):
                 placed,
                 terms,
                 samples,
-                bins,
                 float(rate),
                 flickering,
             ),

@@ -78,6 +78,7 @@ def test_cleaning_brings_every_measure_closer_to_the_truth(tmp_path):
     assert further == []
 
 
+@pytest.mark.long
 def test_cleaning_brings_a_person_closer_to_the_truth(tmp_path):
     uncleaned, cleaned_ = compared(tmp_path, simulated.PEOPLE[:1], FEW_TRIALS)
     # Of one person and few windows a single measure may go either way; what muscle does to the

@@ -14,7 +14,9 @@ from onbin.windows import LEFT_OUT, Unplaced, Window, WindowVerdict, chain_gain
 # A response is there hardly by chance, at the best of all channels or in its region; and the most
 # that the removal of components may change it by.
 PRESENT_P, MOST_CHANGE = 1e-3, 0.02
-JUDGED_HARMONICS = (1, 2)  # of which the noise beside them is judged
+# The noise beside these harmonics is judged, in so many bins on each side past those skipped: not
+# those of the response, so that other neighbours for it do not clean anew.
+JUDGED_HARMONICS, JUDGED_BINS = (1, 2), (10, 1)
 LIMIT_COLUMNS = {
     "peak_to_peak_uv": "peak_to_peak_limit_uv",
     "gradient_uv_per_ms": "gradient_limit_uv_per_ms",
@@ -91,7 +93,6 @@ def noise_beside(
     placed: Sequence[Window],
     terms: Sequence[Term],
     samples: Mapping[Term, int],
-    bins: Sequence[int],
     rate_hz: float,
     flickering: Mapping[str, Sequence[str]],
 ) -> np.ndarray:
@@ -106,8 +107,6 @@ def noise_beside(
     placed : sequence of Window
     terms : sequence of Term
     samples : mapping of Term to int
-    bins : sequence of int
-        Offsets of the neighbouring bins.
     rate_hz : float
     flickering : mapping
         Tags that flicker, by condition.
@@ -131,7 +130,7 @@ def noise_beside(
             rate_hz,
             np.array([float(term.frequency) for term in judged]),
             np.array([samples[term] for term in judged]),
-            np.array(bins),
+            np.array(tagging.neighbour_offsets(*JUDGED_BINS)),
             [float(term.frequency) for term in driven],
         )[:, 0]
         noise_uv2 = (np.abs(beside_uv) ** 2).mean(axis=-1)
