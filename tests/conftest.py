@@ -12,13 +12,6 @@ from onbin import tables
 from workflow import DEMO, copy_workflow, demo_settings, snakemake, write_settings
 
 
-def pytest_collection_modifyitems(items):
-    """Keep the tests of a file in one process, and all those of the demo, which is run once."""
-    for item in items:
-        name = "demo" if "demo" in item.fixturenames else item.path.name
-        item.add_marker(pytest.mark.xdist_group(name))
-
-
 @dataclass(frozen=True)
 class Finished:
     """A study that was run."""
