@@ -40,4 +40,4 @@ onsuccess:
 
 
 onerror:
-    say_last(closing_failures())
+    say_last(closing_failures(log))

@@ -166,5 +166,7 @@ def closing_summary():
     return summary.closing(RESULTS, time.monotonic() - STARTED_S)
 
 
-def closing_failures():
+def closing_failures(log):
+    for path in [log] if isinstance(log, str) else log:
+        summary.note_killed(Path(path).read_text(encoding="utf-8", errors="replace"))
     return summary.failed(RESULTS, RECORDINGS, sys.argv[1:])

@@ -1,7 +1,7 @@
 """What is said at the end: who is in the study, who is not and why, where to look."""
 
 import pytest
-from onbin import layout, summary, tables
+from onbin import layout, records, summary, tables
 
 COLUMNS = ["participant", "in_study", "reason", "recordings", "windows_kept", "left_out"]
 
@@ -42,3 +42,26 @@ def test_a_study_of_everybody_is_complete(tmp_path):
 )
 def test_time_and_nothing_else_where_nothing_was_made(tmp_path, seconds, told):
     assert summary.closing(str(tmp_path), seconds) == f"\nTime taken: {told}\nComplete."
+
+
+def test_a_job_killed_before_it_began_is_known_from_snakemakes_log(tmp_path):
+    log = tmp_path / "logs" / "windows" / "sub-01" / "eeg" / "sub-01_task-x.log"
+    told = f"""
+Error in rule windows:
+    message: None
+    jobid: 6
+    input: a.fif, b.npz
+    log: {log} (check log file(s) for error details)
+
+Error in rule spectra:
+    jobid: 7
+    log: {tmp_path}/logs/spectra/sub-02.log (check log file(s) for error details)
+"""
+    other = layout.record_of(f"{tmp_path}/logs/spectra/sub-02.log")
+    records.note(other, "spectra", "sub-02", "no windows")
+    summary.note_killed(told)
+    found = {r.step: (r.scope, r.told) for r in records.unfinished(tmp_path)}
+    assert found == {
+        "windows": ("sub-01/eeg/sub-01_task-x", records.KILLED),
+        "spectra": ("sub-02", "no windows"),  # its own reason stands
+    }

@@ -1,5 +1,6 @@
 """What is said at the beginning and at the end of a run."""
 
+import re
 import shlex
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
@@ -9,6 +10,8 @@ from onbin.layout import Recording
 from onbin.records import Record
 
 LEAVE_OUT_FAILED = "leave_out_failed"
+# In Snakemake's words: the log of a job that failed, among what it tells of the job.
+FAILED_JOB = re.compile(r"^Error in rule \S+:\n(?:    .*\n)*?    log: (\S.*?\.log)(?: \(|$)", re.M)
 
 
 def opening(paths: Sequence[str], before: Record | None, results: str) -> str:
@@ -97,6 +100,20 @@ def failed(results: str, recordings: Sequence[Recording], arguments: Sequence[st
             *(f"  {line}" for line in pasted),
         ]
     return "\n".join([*lines, f"Failed: {_count(len(left), 'step')}."])
+
+
+def note_killed(text: str) -> None:
+    """Leave a record for jobs that were killed before they could make their own.
+
+    Parameters
+    ----------
+    text : str
+        What Snakemake wrote into its log: it names the log of each job that failed.
+    """
+    for path in FAILED_JOB.findall(text):
+        step, _, scope = path.removesuffix(".log").partition(f"{layout.LOGS}/")[2].partition("/")
+        if scope and not layout.record_of(path).exists():
+            records.note(layout.record_of(path), step, scope, records.KILLED)
 
 
 def failed_recordings(left: Iterable[Record], recordings: Sequence[Recording]) -> dict[str, str]:

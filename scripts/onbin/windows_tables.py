@@ -13,7 +13,7 @@ from onbin.windows import LEFT_OUT, Unplaced, Window, WindowVerdict, chain_gain
 
 # A response is there hardly by chance, at the best of all channels or in its region; and the most
 # that the removal of components may change it by.
-PRESENT_P, MOST_CHANGE = 1e-3, 0.02
+PRESENT_P, MOST_CHANGE = 1e-3, 0.05
 # The noise beside these harmonics is judged, in so many bins on each side past those skipped: not
 # those of the response, so that other neighbours for it do not clean anew.
 JUDGED_HARMONICS, JUDGED_BINS = (1, 2), (10, 1)
