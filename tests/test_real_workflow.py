@@ -50,7 +50,7 @@ EYES_SETTINGS = {
 @pytest.fixture(
     scope="module",
     params=[
-        pytest.param(["03", "05"], id="two_people"),  # the weakest and the strongest
+        pytest.param(["01"], id="one_person"),
         pytest.param(["01", "02", "03", "04", "05"], marks=pytest.mark.long, id="all_five"),
     ],
 )
@@ -78,7 +78,7 @@ def recordings(rows):
 def test_the_light_is_the_largest_of_four_in_every_recording(led):
     _, rows = led
     found = recordings(rows)
-    assert len(found) in (8, 20)
+    assert len(found) in (4, 20)
     for (_, condition), four in found.items():
         assert len(four) == 4
         assert max(four, key=lambda row: row["amplitude_uv"])["tag"] == condition
@@ -100,6 +100,7 @@ def test_the_light_is_where_the_settings_say(led):
             assert abs(row["offset_hz"]) < 0.02  # no one knows it better than the 30 s can tell
 
 
+@pytest.mark.long
 def test_alpha_grows_when_the_eyes_close(tmp_path):
     # Goldberger et al. 2000; Schalk et al. 2004: eyes-open and eyes-closed baselines of S001
     dataset = eyes_dataset(tmp_path / "dataset")
