@@ -25,6 +25,7 @@ from onbin.errors import OnbinError, SettingsError
 from onbin.runner import run
 from onbin.settings import load_settings, part
 from scipy.io import savemat
+from test_runner import Named
 
 ROOT = Path(__file__).parents[1]
 RATE_HZ, DURATION_S = 200, 30
@@ -288,20 +289,6 @@ def put(value):
 
 
 # --- the edge, called as the workflow does ---
-
-
-class Named:
-    """Named values as Snakemake hands them to a script."""
-
-    def __init__(self, **named):
-        self.__dict__.update(named)
-
-    def items(self):
-        return self.__dict__.items()
-
-    def __iter__(self):
-        for value in self.__dict__.values():
-            yield from [value] if isinstance(value, str) else value
 
 
 def settings_of(study, **changes):

@@ -446,7 +446,8 @@ def test_damaged_real_recordings(kind, count, tmp_path):
     for extension in {".vhdr", ".vmrk"} & set(files):
         name = Path(fuzzing.STEM).name + "_eeg"
         files[extension] = files[extension].replace(stem.encode(), name.encode())
-    take_in_damaged(fuzzing.write(tmp_path, fuzzing.dataset(files, channels=False)), count)
+    folder = fuzzing.write(tmp_path, fuzzing.dataset(files, channels=False))
+    assert len(take_in_damaged(folder, count)) == count
 
 
 def claims(field, text):

@@ -26,7 +26,8 @@ class Named:
         return self.__dict__.items()
 
     def __iter__(self):
-        return iter(self.__dict__.values())
+        for value in self.__dict__.values():
+            yield from [value] if isinstance(value, str) else value
 
 
 @pytest.fixture
