@@ -2,6 +2,7 @@
 
 import hashlib
 import json
+import os
 import shutil
 import subprocess
 import sys
@@ -107,6 +108,38 @@ def test_every_output_has_a_sidecar_that_explains_it(demo):
 
 def test_nothing_half_made_is_left_behind(demo):
     assert not list(demo.results.rglob(".part-*"))
+
+
+@pytest.fixture
+def read_only(tmp_path):
+    """The demo's dataset where nothing can be written, not even by root."""
+    place = tmp_path / "dataset"
+    shutil.copytree(DEMO, place)
+    if os.geteuid():
+        for path in (*place.rglob("*"), place):
+            path.chmod(0o555 if path.is_dir() else 0o444)
+        yield place
+        for path in (place, *place.rglob("*")):
+            path.chmod(0o755)
+        return
+    for command in (["--bind", place], ["-o", "remount,ro,bind"]):
+        options = {"capture_output": True, "check": False}
+        if subprocess.run(["mount", *command, place], **options).returncode:
+            pytest.skip("a folder cannot be mounted read-only here")
+    yield place
+    subprocess.run(["umount", place], check=True)
+
+
+def test_a_read_only_dataset_will_do(read_only, tmp_path):
+    with pytest.raises(OSError, match="Read-only|denied"):
+        (read_only / "mark").touch()
+    settings = demo_settings(dataset={"folder": str(read_only), "participants": ["01"]})
+    intake = "results/sub-01/eeg/sub-01_task-panels_desc-intake_eeg.fif"
+    before = digests(read_only)
+    finished = run_study(tmp_path / "study", settings, "--", intake, "results/study/plan.tsv")
+    assert finished.exit_code == 0, finished.output
+    assert (tmp_path / "study" / intake).exists()
+    assert digests(read_only) == before
 
 
 # --- a change reruns what it touches ---
