@@ -131,7 +131,7 @@ def read_only(tmp_path):
 
 
 def test_a_read_only_dataset_will_do(read_only, tmp_path):
-    with pytest.raises(OSError, match="Read-only|denied"):
+    with pytest.raises(OSError, match=r"Read-only|denied"):
         (read_only / "mark").touch()
     settings = demo_settings(dataset={"folder": str(read_only), "participants": ["01"]})
     intake = "results/sub-01/eeg/sub-01_task-panels_desc-intake_eeg.fif"
