@@ -6,8 +6,6 @@ import sys
 import time
 from pathlib import Path
 
-from snakemake.exceptions import WorkflowError
-
 sys.path.insert(0, str(Path(workflow.basedir) / "scripts"))
 
 from onbin import decisions, layout, records, summary

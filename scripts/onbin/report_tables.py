@@ -20,8 +20,6 @@ Rows = Sequence[Mapping[str, Any]]
 KINDS = ("channels", "designs", "gains", "sensors", "components", "windows", "cleaning")
 FUNDAMENTAL = "1f"
 ATTENTION_LEVEL = 0.05  # of telling the attended tag of one person
-# Changes of light a second that can provoke seizures, and those to which photosensitive people
-# respond most (common practice; the lower end as in WCAG 2.2, 2.3.1, and Harding et al. 2005).
 
 
 @dataclass(frozen=True)

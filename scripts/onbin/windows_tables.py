@@ -70,11 +70,7 @@ def verdict_rows(
             "verdict": verdict.verdict,
             "reason": ", ".join(verdict.reasons) or None,
             **verdict.figures,
-            **{
-                LIMIT_COLUMNS[name]: v
-                for name, v in verdict.limits.items()
-                if name in LIMIT_COLUMNS
-            },
+            **{column: verdict.limits[name] for name, column in LIMIT_COLUMNS.items()},
         }
     for number, missing in enumerate(unplaced, start=len(verdicts) + 1):
         index = missing.index_in_trial
